@@ -1,0 +1,164 @@
+"""The one way code becomes machine code: `hot` for compiled functions, `callback` for C function pointers, and their cache on disk.
+
+The cache never goes stale: its folder is keyed by a hash of every compiled source file of the package, by the versions of
+Python, numba, llvmlite and numpy, and by the processor. Editing one kernel therefore recompiles every caller of it.
+The folder is private (0700) and its owner is checked, because what lies in it is executed.
+"""
+
+import functools
+import hashlib
+import os
+import platform
+import stat
+import sys
+import types as python_types
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any, TypeVar
+
+import numba
+import numpy as np
+from numba.core import types
+from numba.core.caching import CompileResultCacheImpl, FunctionCache, _CacheLocator
+from numba.core.ccallback import CFunc
+
+from rtctl.errors import SetupError
+
+F = TypeVar("F", bound=Callable[..., Any])
+
+PACKAGE = Path(__file__).resolve().parents[1]
+# Places below the package that may hold compiled code; tests/structure checks that no other file uses `hot`.
+COMPILED_PLACES = (
+    "blocks.py",
+    "cycle.py",
+    "kernels",
+    "laws",
+    "loop",
+    "plant",
+    "record",
+    "references",
+    "supervisor",
+    "wire",
+)
+
+
+def compiled_sources() -> list[Path]:
+    """Every source file whose text can end up in machine code, sorted."""
+    files: list[Path] = []
+    for place in COMPILED_PLACES:
+        path = PACKAGE / place
+        files.extend(sorted(path.rglob("*.py")) if path.is_dir() else [path])
+    return [file for file in files if file.exists()]
+
+
+@functools.cache
+def cache_key() -> str:
+    """Hash of every compiled source file, of the versions of the compiler and of the processor (16 hex digits)."""
+    digest = hashlib.sha256()
+    for file in compiled_sources():
+        digest.update(str(file.relative_to(PACKAGE)).encode() + b"\0" + file.read_bytes() + b"\0")
+    versions = (
+        sys.version,
+        numba.__version__,
+        _version("llvmlite"),
+        np.__version__,
+        platform.machine(),
+        _processor(),
+        os.environ.get("NUMBA_BOUNDSCHECK", ""),
+    )
+    digest.update(repr(versions).encode())
+    return digest.hexdigest()[:16]
+
+
+@functools.cache
+def cache_folder() -> Path:
+    """The private folder of compiled code, made if missing. Raises `SetupError` if somebody else could write to it."""
+    base = Path(os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache") / "rtctl"
+    folder = base / cache_key()
+    for path in (base, folder):
+        path.mkdir(mode=0o700, parents=True, exist_ok=True)
+        info = path.stat()
+        if info.st_uid != os.getuid() or stat.S_IMODE(info.st_mode) & 0o022:
+            raise SetupError(
+                f"{path}: the folder of compiled code must belong to this user and be writable by nobody else. "
+                f"Run: chown {os.getuid()} {path} && chmod 700 {path}"
+            )
+    return folder
+
+
+def _version(module: str) -> str:
+    return str(getattr(sys.modules.get(module), "__version__", ""))
+
+
+def _processor() -> str:
+    import llvmlite.binding as llvm
+
+    return f"{llvm.get_host_cpu_name()} {llvm.get_host_cpu_features().flatten()}"
+
+
+class _Locator(_CacheLocator):
+    """Puts the cache of every function into the one keyed folder."""
+
+    def __init__(self, py_func: Any) -> None:
+        self._place = f"{py_func.__module__}.{py_func.__qualname__}:{py_func.__code__.co_firstlineno}"
+
+    def get_cache_path(self) -> str:
+        return str(cache_folder())
+
+    def get_source_stamp(self) -> str:
+        return cache_key()
+
+    def get_disambiguator(self) -> str:
+        return hashlib.sha256(self._place.encode()).hexdigest()[:10]
+
+    @classmethod
+    def from_function(cls, py_func: Any, py_file: str) -> "_Locator":
+        return cls(py_func)
+
+
+class _CacheImpl(CompileResultCacheImpl):
+    _locator_classes = [_Locator]
+
+
+class _Cache(FunctionCache):
+    _impl_class = _CacheImpl
+
+
+def hot(function: F) -> F:
+    """Compile on first call and keep the result on disk. No interpreter lock, no fastmath, IEEE division.
+
+    Inside: no allocation, no exceptions, no strings; outputs are arguments; the return value is a status, `OK` on success.
+    """
+    dispatcher = numba.njit(nogil=True, error_model="numpy", fastmath=False)(function)
+    if not numba.config.DISABLE_JIT:
+        dispatcher._cache = _Cache(function)
+    return dispatcher
+
+
+class Callback:
+    """A compiled C function. `address` is its pointer; keep the object alive as long as the pointer is used."""
+
+    def __init__(self, compiled: CFunc) -> None:
+        self._compiled = compiled
+        self.address = int(compiled.address)
+
+    @property
+    def llvm_ir(self) -> str:
+        """The compiled form as text, for checks of what it may call or raise."""
+        return str(self._compiled.inspect_llvm())
+
+
+def callback(template: Callable[..., Any], name: str, argument_count: int, **bound: Any) -> Callback:
+    """Compile `template` to a C function `int64 name(void *, ...)` with `argument_count` addresses, with global names bound.
+
+    template        a module-level Python function that reads its memory blocks from addresses
+    bound           what the global names in `template` stand for, e.g. torque=the law's compiled function
+    """
+    function = python_types.FunctionType(template.__code__, {**template.__globals__, **bound}, name)
+    function.__module__ = template.__module__
+    function.__qualname__ = f"{template.__qualname__}_{name}"
+    signature = ((types.int64,) * argument_count, types.int64)
+    compiled = CFunc(function, signature, locals={}, options={"error_model": "numpy", "fastmath": False})
+    compiled._cache = _Cache(function)
+    compiled.compile()
+    return Callback(compiled)
