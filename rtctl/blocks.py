@@ -79,7 +79,15 @@ REFERENCE_MEMORY = np.dtype(
     align=True,
 )
 
-REFERENCE_SAMPLE = np.dtype([("q_ref", "f8", _J), ("qd_ref", "f8", _J), ("qdd_ref", "f8", _J)], align=True)
+REFERENCE_SAMPLE = np.dtype(
+    [
+        ("t_s", "f8"),  # in: time since the motion began
+        ("q_ref", "f8", _J),  # out; for `begin` in: the measured pose
+        ("qd_ref", "f8", _J),
+        ("qdd_ref", "f8", _J),
+    ],
+    align=True,
+)
 
 # ---- messages --------------------------------------------------------------------------------------------------------------------
 
@@ -278,8 +286,8 @@ POINTERS = np.dtype(  # what is in force now: exchanged between cycles, recorded
         ("law_index", "i8"),  # which law of the run, for the record
         ("law_term_count", "i8"),
         ("law_parameters", LAW_PARAMETERS),
-        ("reference_begin", "i8"),  # address of `int64 begin(parameters, memory, q_measured)`
-        ("reference_sample", "i8"),  # address of `int64 sample(parameters, memory, t_s bits, sample)`
+        ("reference_begin", "i8"),  # address of `int64 begin(parameters, memory, sample)`
+        ("reference_sample", "i8"),  # address of `int64 sample(parameters, memory, sample)`
     ],
     align=True,
 )
