@@ -216,14 +216,6 @@ LIMITS = np.dtype(
 )
 
 
-@dataclass(frozen=True)
-class Watch:
-    """A watch's place in the condition bits and margins, and the cause it raises."""
-
-    index: int
-    name: str
-
-
 WATCH_NAMES = (
     "estop",
     "state_invalid",
@@ -243,6 +235,7 @@ WATCH_NAMES = (
     "loop_delay",
     "brake_deadline",
     "operator_stop",
+    "gate",
 )
 (
     WATCH_ESTOP,
@@ -263,6 +256,7 @@ WATCH_NAMES = (
     WATCH_LOOP_DELAY,
     WATCH_BRAKE_DEADLINE,
     WATCH_OPERATOR_STOP,
+    WATCH_GATE,
 ) = range(len(WATCH_NAMES))
 WATCH_COUNT = len(WATCH_NAMES)
 MAX_WATCHES = 24  # room in the blocks; the cause code of watch w is w + 1, 0 = no cause
@@ -302,17 +296,20 @@ SUPERVISOR_MEMORY = np.dtype(
         ("dwell_ns", "i8", MAX_WATCHES),  # how long each condition has held
         ("checks_ns", "i8"),  # how long all checks have held
         ("still_ns", "i8"),  # how long all joints have been still
-        ("late_bits", "i8"),  # the last 64 blocks of cycles, one bit each if one of them was late
-        ("late_count", "i8"),
+        ("late_count", "i8"),  # leaky: one late cycle adds one, `late_window / late_max` cycles take one off
         ("late_cycle", "i8"),
+        ("boot_offset_ns", "i8"),
         ("side_beat", "i8"),
         ("side_ns", "i8"),  # when the side thread's heartbeat last changed
         ("q_hold", "f8", _J),  # pose reached, for holding
         ("tau_hold", "f8", _J),  # holding torque at the start of `live`
         ("tau_out", "f8", _J),  # what left the gate in the last cycle
         ("tau_law", "f8", _J),
-        ("live_ns", "i8"),  # time in live
+        ("live_ns", "i8"),  # time in live since the brake opened
         ("reference_done", "i8"),
+        ("reference_status", "i8"),  # OK or what `begin` or `sample` returned
+        ("law_status", "i8"),
+        ("gate_refused", "i8"),  # 1: the last torque was not fit to leave
     ],
     align=True,
 )
@@ -332,6 +329,12 @@ LINK_MEMORY = np.dtype(  # what the controller remembers about the driver
         ("resend_count", "i8"),
         ("sequence", "i8"),  # of the next torque message
         ("answer_sequence", "i8"),  # state sequence the last torque answered
+        ("dropped", "i8"),  # states with an old sequence number
+        ("identity", "i8"),  # 0 unknown, 1 the right arm and joint count, -1 not
+        ("finite", "i8"),  # 1: all numbers of the newest state are finite
+        ("restarted", "i8"),  # 1: the driver's session changed while torque was flowing
+        ("q_before", "f8", _J),  # of the state before the newest, for the glitch watch
+        ("before_sample_ns", "i8"),
         ("sent_ns", "i8", 256),  # when sequence % 256 was sent
         ("q", "f8", _J),  # of the newest valid state
         ("qd", "f8", _J),
