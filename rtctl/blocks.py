@@ -306,6 +306,8 @@ SUPERVISOR_MEMORY = np.dtype(
         ("tau_out", "f8", _J),  # what left the gate in the last cycle
         ("tau_law", "f8", _J),
         ("live_ns", "i8"),  # time in live since the brake opened
+        ("brake_wait_ns", "i8"),  # time in live with the brake still closed
+        ("grant", "i8"),  # number of the grant this motion started with
         ("reference_done", "i8"),
         ("reference_status", "i8"),  # OK or what `begin` or `sample` returned
         ("law_status", "i8"),
