@@ -4,6 +4,7 @@ Operating faults (a limit crossed, a state gone stale) are not exceptions but ca
 """
 
 from dataclasses import dataclass
+from typing import Self
 
 
 @dataclass(frozen=True)
@@ -32,7 +33,7 @@ class RtctlError(Exception):
         self.findings = findings
 
     @classmethod
-    def from_findings(cls, findings: list[Finding]) -> "RtctlError":
+    def from_findings(cls, findings: list[Finding]) -> Self:
         """One error that says all of them, one per line."""
         return cls("\n".join(str(finding) for finding in findings), tuple(findings))
 

@@ -15,6 +15,7 @@ __all__ = [
     "array_at",
     "atomic_add",
     "atomic_exchange",
+    "atomic_fence",
     "atomic_load",
     "atomic_store",
     "block_at",
@@ -118,6 +119,17 @@ def atomic_store(typingctx: Any, address: Any, value: Any) -> Any:
         return context.get_dummy_value()
 
     return types.void(types.int64, types.int64), generate
+
+
+@intrinsic
+def atomic_fence(typingctx: Any) -> Any:
+    """Later writes are not moved before earlier reads and writes (release fence): marks a block before its words change."""
+
+    def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
+        builder.fence("release")
+        return context.get_dummy_value()
+
+    return types.void(), generate
 
 
 def _rmw(operation: str) -> Any:
