@@ -38,7 +38,8 @@ def pass_gate(setup, mode, tau, gravity, tau_last, row):  # type: ignore[no-unty
         row["tau_out"][i] = 0.0
         row["tau_magnitude"][i] = 0.0
     for i in range(n):
-        if not (math.isfinite(tau[i]) and math.isfinite(tau_last[i]) and limits["tau_max"][i] >= 0.0):
+        rate = limits["tau_rate_max"][i] if mode == MODE_LIVE else limits["brake_tau_rate_max"][i]
+        if not (math.isfinite(tau[i]) and math.isfinite(tau_last[i]) and limits["tau_max"][i] >= 0.0 and rate >= 0.0):
             return REFUSED
 
     scale = 1.0
