@@ -1,0 +1,33 @@
+"""Outside truth: id -> full citation, or library with version. The only list of sources; a test names its source with `@source`.
+
+Values quoted from memory and facts of the trade without a source are entries too, and say so.
+"""
+
+from collections.abc import Callable
+from typing import Any, TypeVar
+
+F = TypeVar("F", bound=Callable[..., Any])
+
+SOURCES: dict[str, str] = {
+    "common practice": "Common practice of the trade, no source.",
+    "zlib": "CRC-32 of the Python standard library's zlib (the IEEE 802.3 polynomial).",
+    "msgpack-spec": "MessagePack specification, github.com/msgpack/msgpack, spec.md: formats of integers, floats, arrays, maps.",
+    "msgpack-vectors": "kawanet/msgpack-test-suite, github.com: published values with every legal form of each.",
+    "msgpack-python": "Python package msgpack >= 1.0, another implementation of the format.",
+    "crc-check": "CRC catalogue of G. Cook, CRC-32/ISO-HDLC: check 0xCBF43926, residue 0xDEBB20E3 (from memory).",
+    "pep427": "PEP 427, The Wheel Binary Package Format 1.0, 2012.",
+}
+
+
+def source(identifier: str, where: str = "") -> Callable[[F], F]:
+    """Name the source of the numbers or the rule a test checks against: an id of `SOURCES`, and where in it.
+
+    Raises KeyError for an id that is not listed, when the test module is imported.
+    """
+    citation = SOURCES[identifier]
+
+    def attach(test: F) -> F:
+        test.sources = [*getattr(test, "sources", []), (citation, where)]  # type: ignore[attr-defined]  # functions take attributes
+        return test
+
+    return attach
