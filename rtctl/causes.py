@@ -28,8 +28,18 @@ _TABLE = (
     (
         "state_invalid",
         "A state message was not usable: a number was not finite, or it came from another arm.",
-        ("an encoder or its cable failed", "the driver divides by zero or sends an uninitialised value", "two arms share an endpoint"),
+        (
+            "an encoder or its cable failed",
+            "the driver divides by zero or sends an uninitialised value",
+            "two arms share an endpoint",
+        ),
         "Look at q and qd of the last rows of the record; check the driver's conversion.",
+    ),
+    (
+        "clock_jump",
+        "The loop was away longer than a torque is valid, or the clocks jumped.",
+        ("the computer was suspended", "the process was stopped", "the virtual machine was paused"),
+        "Keep the computer from sleeping; reset when the arm is still.",
     ),
     (
         "state_age",
@@ -54,12 +64,6 @@ _TABLE = (
         "The driver no longer grants this controller the right to command torque.",
         ("the torque arrived too late for the driver", "the driver was restarted", "another controller holds the grant"),
         "Look at loop_delay_ns and holder before the stop; see that only one controller runs.",
-    ),
-    (
-        "clock_jump",
-        "The loop was away longer than a torque is valid, or the clocks jumped.",
-        ("the computer was suspended", "the process was stopped", "the virtual machine was paused"),
-        "Keep the computer from sleeping; reset when the arm is still.",
     ),
     (
         "position",

@@ -31,11 +31,11 @@ _N, _F, _0 = STOP_NONE, STOP_FAULT, STOP_NOW
 _TABLE = {
     "estop": (_F, _F, _F, _F, _F, _F),
     "state_invalid": (_N, _N, _0, _0, _0, _N),
+    "clock_jump": (_N, _N, _0, _0, _0, _N),
     "state_age": (_N, _N, _0, _0, _0, _N),
     "driver_fault": (_N, _N, _0, _0, _0, _N),
     "stop_chain": (_N, _N, _0, _0, _0, _N),
     "grant": (_N, _N, _0, _0, _0, _N),
-    "clock_jump": (_N, _N, _0, _0, _0, _N),
     "position": (_N, _N, _F, _N, _F, _N),
     "position_glitch": (_N, _N, _0, _0, _0, _N),
     "speed": (_N, _N, _F, _N, _F, _N),

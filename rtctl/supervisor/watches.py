@@ -11,7 +11,6 @@ from rtctl.blocks import (
     MODE_BRAKING,
     MODE_LIVE,
     MODE_OFF,
-    MODE_READY,
     STATUS_BRAKE,
     STATUS_ENABLED,
     STATUS_FAULT,
@@ -282,7 +281,7 @@ def update_still(setup, memory, used):  # type: ignore[no-untyped-def]
 
 @hot
 def update_checks(setup, memory, conditions, hold_fits, still):  # type: ignore[no-untyped-def]
-    """True when no condition is present, the arm is still and the holding torque fits, for the ready dwell (or at rest in `holding`)."""
+    """True when no condition is present, the arm is still and the holding torque fits, long enough to leave `off`."""
     supervisor = memory["supervisor"]
     requests = (1 << WATCH_ESTOP) | (1 << WATCH_OPERATOR_STOP)
     clear = conditions & ~requests == 0 and hold_fits and still
@@ -290,7 +289,6 @@ def update_checks(setup, memory, conditions, hold_fits, still):  # type: ignore[
         supervisor["checks_ns"] = 0
     else:
         supervisor["checks_ns"] += setup["period_ns"]
-    mode = supervisor["mode"]
-    if mode == MODE_OFF or mode == MODE_READY:
+    if supervisor["mode"] == MODE_OFF:
         return supervisor["checks_ns"] > setup["limits"]["ready_dwell_ns"]
     return clear

@@ -224,7 +224,11 @@ def no_stop_stays_in_force_without_its_mode(s: Step) -> bool:
     return (s.next_stop == STOP_NONE) == free
 
 
-RULES = [value for name, value in list(globals().items()) if callable(value) and list(getattr(value, "__annotations__", {})) == ["s", "return"]]
+RULES = [
+    value
+    for name, value in list(globals().items())
+    if callable(value) and list(getattr(value, "__annotations__", {})) == ["s", "return"]
+]
 
 
 @pytest.mark.parametrize("rule", RULES, ids=lambda rule: rule.__name__)
