@@ -9,9 +9,6 @@ every later reader unchanged, so that a run of fields needs one check at its end
 Source: MessagePack specification (msgpack.org), type formats; all multi-byte values are big-endian.
 """
 
-# mypy: disable-error-code="no-untyped-def, no-untyped-call"
-# (the arguments of compiled functions are typed by numba)
-
 import numpy as np
 
 from rtctl.blocks import KIND_STATE, KIND_TORQUE, MAX_MESSAGE_BYTES, REQUEST_RELEASE, WIRE_VERSION
@@ -52,7 +49,7 @@ ARRAY16, MAP16 = 0xDC, 0xDE
 NEGATIVE_FIXINT = 0xE0
 
 
-# ---- reading -----------------------------------------------------------------------------------------------------------------------
+# ---- reading -------------------------------------------------------------------------------------------------------------------
 
 
 @hot
@@ -121,7 +118,7 @@ def _counter(buffer, pos, length):
 
 @hot
 def _number(buffer, pos, length):
-    """The physical value at `pos`: (float64, next position). Both float forms and every integer form; integers are rounded to even."""
+    """The physical value at `pos`: (float64, next position). Both float forms and every integer form, rounded to even."""
     if pos < 0:
         return 0.0, pos
     if pos >= length:
@@ -356,7 +353,7 @@ def decode_torque(buffer, length, torque):
     return _close(buffer, pos, length)
 
 
-# ---- writing -----------------------------------------------------------------------------------------------------------------------
+# ---- writing -------------------------------------------------------------------------------------------------------------------
 
 
 @hot

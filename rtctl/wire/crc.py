@@ -29,7 +29,7 @@ TABLES = _tables()
 
 
 @hot
-def crc32(buffer, length):  # type: ignore[no-untyped-def]  # kernels are typed by the compiler
+def crc32(buffer, length):
     """CRC-32 of the first `length` bytes, as a non-negative integer; equal to zlib.crc32.
 
     buffer  (>= length,)  uint8    bytes; `length` is not checked here
