@@ -144,8 +144,11 @@ class Callback:
 
     @property
     def llvm_ir(self) -> str:
-        """The compiled form as text, for checks of what it may call or raise."""
-        return str(self._compiled.inspect_llvm())
+        """The optimised form as text, for checks of what it may call or raise.
+
+        The form kept for linking is also there when the function came from the cache; numba's own inspection is empty then.
+        """
+        return str(self._compiled._library._get_module_for_linking())
 
 
 def callback(template: Callable[..., Any], name: str, argument_count: int, **bound: Any) -> Callback:
