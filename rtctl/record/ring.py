@@ -24,7 +24,6 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
-import numpy.typing as npt
 
 from rtctl.blocks import ROW
 from rtctl.errors import ConfigError, Finding, SetupError
@@ -164,7 +163,7 @@ def default_ring_path(size_bytes: int) -> Path:
 
 
 class Ring:
-    """A mapped ring. The writer makes it with `create` and hands `block` to `rtctl.record.append.ring_append`; readers `open` it."""
+    """A mapped ring. The writer makes it with `create` and hands `block` to `ring_append`; readers `open` it."""
 
     def __init__(self, path: Path, mapped: mmap.mmap) -> None:
         self.path = path
