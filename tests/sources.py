@@ -15,7 +15,13 @@ SOURCES: dict[str, str] = {
     "msgpack-vectors": "kawanet/msgpack-test-suite, github.com: published values with every legal form of each.",
     "msgpack-python": "Python package msgpack >= 1.0, another implementation of the format.",
     "crc-check": "CRC catalogue of G. Cook, CRC-32/ISO-HDLC: check 0xCBF43926, residue 0xDEBB20E3 (from memory).",
+    "pin": "Python wheel pin 4.1.0 (pinocchio), C++ rigid-body dynamics library.",
+    "mujoco": "Python wheel mujoco 4.0.0, physics engine; compared in float64.",
+    "fips180-4": "NIST, FIPS PUB 180-4, Secure Hash Standard, 2015: SHA-256.",
     "pep427": "PEP 427, The Wheel Binary Package Format 1.0, 2012.",
+    "abramowitz1964": "M. Abramowitz, I. Stegun, Handbook of Mathematical Functions, 1964, ch. 17 (elliptic integrals); from memory.",
+    "landau1976": "L. D. Landau, E. M. Lifshitz, Mechanics, 3rd ed. 1976; from memory, integrated by hand in the test.",
+    "cgpm1901": "3rd General Conference on Weights and Measures, 1901: standard gravity 9.80665 m/s^2 exactly.",
 }
 
 

@@ -1,4 +1,4 @@
-"""Memory layout of the arm model and of the kernels' scratch, fixed at 16 joints so that every kernel is compiled once for all arms.
+"""Memory layout of the arm model and of the kernels' scratch, fixed at 16 joints: every kernel is compiled once for all arms.
 
 Compiled constants for every stride make the recursive kernels as fast as straight-line code for one arm (DEVELOPERS.md, Decisions).
 The model is written once by `rtctl.arm` and never again; a test checks that no compiled function writes into it.
@@ -13,6 +13,8 @@ MAX_JOINTS = 16
 MAX_FRAMES = 16
 
 OK = 1  # status of success; compiled code that dies returns 0, so 0 is never success
+NOT_POSITIVE = -1  # a pivot of an inertia is not positive (or not a number): the model or the state is unusable
+NO_SUCH_FRAME = -2
 
 REVOLUTE = 0  # continuous joints are revolute joints without position limits
 PRISMATIC = 1
@@ -49,19 +51,23 @@ SCRATCH = np.dtype(
         ("p", "f8", (_J, 3)),  # m, body origin in parent coordinates
         ("R_base", "f8", (_J, 3, 3)),  # body to base coordinates
         ("p_base", "f8", (_J, 3)),  # m, body origin in base coordinates
-        ("w", "f8", (_J, 3)),  # rad/s, angular velocity, body coordinates
+        ("w", "f8", (_J, 3)),  # rad/s, angular velocity; each kernel says in which axes
         ("wd", "f8", (_J, 3)),  # rad/s^2
-        ("a", "f8", (_J, 3)),  # m/s^2, acceleration of the body origin minus gravity, body coordinates
+        ("a", "f8", (_J, 3)),  # m/s^2, acceleration of the body origin minus gravity
         ("force", "f8", (_J, 3)),  # N
         ("moment", "f8", (_J, 3)),  # N m, about the body origin
         ("mass_c", "f8", _J),  # kg, composite mass
         ("h_c", "f8", (_J, 3)),  # kg m, composite first moment
         ("I_c", "f8", (_J, 6)),  # kg m^2, composite inertia
-        ("IA", "f8", (_J, 6, 6)),  # articulated-body inertia
-        ("pA", "f8", (_J, 6)),  # articulated-body bias force
-        ("U", "f8", (_J, 6)),
-        ("D", "f8", _J),
-        ("u", "f8", _J),
+        ("IA", "f8", (_J, 21)),  # articulated-body inertia: 6 of the moment block, 9 of the mixed block, 6 of the force block
+        ("pA", "f8", (_J, 6)),  # articulated-body bias, moment then force
+        ("c", "f8", (_J, 6)),  # acceleration of a body relative to its parent at qdd = 0, angular then linear
+        ("r", "f8", (_J, 3)),  # m, body origin from the parent's, base axes
+        ("U", "f8", (_J, 6)),  # articulated-body inertia times joint axis
+        ("D", "f8", _J),  # joint-space part of U, with rotor inertia
+        ("u", "f8", _J),  # joint torque minus bias
+        ("v", "f8", (_J, 3)),  # m/s, velocity of the body origin
+        ("zero", "f8", _J),  # never written
         ("M", "f8", (_J, _J)),  # joint-space inertia matrix
         ("L", "f8", (_J, _J)),  # its Cholesky factor
         ("J", "f8", (6, _J)),  # Jacobian
