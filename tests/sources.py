@@ -18,6 +18,7 @@ SOURCES: dict[str, str] = {
     "pin": "Python wheel pin 4.1.0 (pinocchio), C++ rigid-body dynamics library.",
     "mujoco": "Python wheel mujoco 4.0.0, physics engine; compared in float64.",
     "fips180-4": "NIST, FIPS PUB 180-4, Secure Hash Standard, 2015: SHA-256.",
+    "rfc8259": "RFC 8259, The JavaScript Object Notation (JSON) Data Interchange Format, 2017.",
     "pep427": "PEP 427, The Wheel Binary Package Format 1.0, 2012.",
     "abramowitz1964": "M. Abramowitz, I. Stegun, Handbook of Mathematical Functions, 1964, ch. 17 (elliptic integrals); from memory.",
     "landau1976": "L. D. Landau, E. M. Lifshitz, Mechanics, 3rd ed. 1976; from memory, integrated by hand in the test.",

@@ -1,4 +1,4 @@
-"""The recorder: going on after a death, a disk that refuses, folders that cannot take a record. In this process, without waiting."""
+"""The recorder: going on after a death, a disk that refuses, folders that cannot take a record. In this process."""
 
 import errno
 import os
