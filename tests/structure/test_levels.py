@@ -14,6 +14,7 @@ LEVELS = {
     "rtctl.errors": 0,
     "rtctl.causes": 0,
     "rtctl.places": 0,
+    "rtctl.progress": 0,
     "rtctl.kernels": 1,
     "rtctl.blocks": 1.5,
     "rtctl.config": 2,
