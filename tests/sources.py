@@ -17,12 +17,20 @@ SOURCES: dict[str, str] = {
     "crc-check": "CRC catalogue of G. Cook, CRC-32/ISO-HDLC: check 0xCBF43926, residue 0xDEBB20E3 (from memory).",
     "pin": "Python wheel pin 4.1.0 (pinocchio), C++ rigid-body dynamics library.",
     "mujoco": "Python wheel mujoco 4.0.0, physics engine; compared in float64.",
+    "numpy": "NumPy, its documented statistics functions.",
     "fips180-4": "NIST, FIPS PUB 180-4, Secure Hash Standard, 2015: SHA-256.",
     "rfc8259": "RFC 8259, The JavaScript Object Notation (JSON) Data Interchange Format, 2017.",
     "pep427": "PEP 427, The Wheel Binary Package Format 1.0, 2012.",
     "abramowitz1964": "M. Abramowitz, I. Stegun, Handbook of Mathematical Functions, 1964, ch. 17 (elliptic integrals); from memory.",
     "landau1976": "L. D. Landau, E. M. Lifshitz, Mechanics, 3rd ed. 1976; from memory, integrated by hand in the test.",
     "cgpm1901": "3rd General Conference on Weights and Measures, 1901: standard gravity 9.80665 m/s^2 exactly.",
+    "kelly2005": "R. Kelly, V. Santibanez, A. Loria, Control of Robot Manipulators in Joint Space, Springer, 2005 (from memory).",
+    "flash-hogan1985": "T. Flash, N. Hogan, The coordination of arm movements, J. Neuroscience 5(7), 1985, pp. 1688-1703.",
+    "takegaki-arimoto1981": "M. Takegaki, S. Arimoto, ASME J. Dynamic Systems, Measurement and Control 103, 1981, pp. 119-125.",
+    "routh": "Routh-Hurwitz criterion, any textbook of control, e.g. Craig, Introduction to Robotics.",
+    "siciliano2009": "B. Siciliano, L. Sciavicco, L. Villani, G. Oriolo, Robotics: Modelling, Planning and Control, Springer, 2009.",
+    "astrom-hagglund1995": "K. J. Astrom, T. Hagglund, PID Controllers: Theory, Design, and Tuning, 1995, sec. 3.5 (from memory).",
+    "scipy": "SciPy >= 1.15, general-purpose numerical library.",
 }
 
 
