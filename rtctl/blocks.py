@@ -172,6 +172,7 @@ BIT_STOP = 2
 BIT_STOP_RELEASE = 4
 BIT_ESTOP = 8
 BIT_RESET = 16
+BIT_LEAVE = 32  # the controller is about to end: `release` instead of `ask` while no torque flows
 
 LIMITER_RAMP = 1  # bits of what changed the torque of a joint
 LIMITER_MAGNITUDE = 2
@@ -409,7 +410,7 @@ COLUMNS = (
     Column("refused", "i8", "cycle", "1", "messages refused since the cycle before"),
     Column("flooded", "i8", "cycle", "1", "1: too many messages waited, none was used"),
     Column("send_failed", "i8", "cycle", "1", "1: the torque of the cycle before could not be sent"),
-    Column("requests", "i8", "cycle", "bits", "requests: 1 start, 2 stop, 4 stop and release, 8 e-stop, 16 reset"),
+    Column("requests", "i8", "cycle", "bits", "requests: 1 start, 2 stop, 4 stop and release, 8 e-stop, 16 reset, 32 leave"),
     Column("side_beat", "i8", "cycle", "1", "heartbeat counter of the side thread"),
     Column("side_required", "i8", "cycle", "1", "1: a silent side thread stops the arm"),
     Column("version", "i8", "cycle", "1", "version of the state message"),

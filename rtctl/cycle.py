@@ -5,6 +5,7 @@ INPUT. The same bytes in give the same bytes out.
 """
 
 from rtctl.blocks import (
+    BIT_LEAVE,
     LIMITER_RAMP,
     MAX_TERMS,
     MODE_BRAKING,
@@ -74,7 +75,7 @@ def cycle(setup, pointers, memory, inp, torque, row):  # type: ignore[no-untyped
 
     tau = memory["scratch"]["x1"][:]
     request = _choose_torque(setup, memory, row, used, gravity, tau)
-    if action == ACTION_RELEASE:
+    if action == ACTION_RELEASE or (request == REQUEST_ASK and inp["requests"] & BIT_LEAVE != 0):
         request = REQUEST_RELEASE
     request = _through_gate(setup, memory, inp, row, used, request, gravity, tau)
     _fill_torque(setup, memory, inp, torque, row, request)
