@@ -1,4 +1,6 @@
-"""The closed table of stop causes: code, name, sentence, likely reasons in order, next step. The one source for every message about them.
+"""The closed table of stop causes: code, name, sentence, likely reasons in order, next step.
+
+The one source for every message about them.
 
 The code of a watch's cause is its index in `rtctl.blocks.WATCH_NAMES` plus one; 0 is no cause.
 """

@@ -163,7 +163,7 @@ def _call_law(setup, pointers, memory, used, row):  # type: ignore[no-untyped-de
 
 @hot
 def _cause_gone(setup, memory, conditions):  # type: ignore[no-untyped-def]
-    """True when nothing that would stop a moving arm is present; the grant and the gate's refusal come back only after the reset."""
+    """True when nothing that would stop a moving arm is present. The grant and the gate's refusal are for the reset to end."""
     remaining = conditions & ~_RETURNS_AFTER_RESET
     return fold(remaining, MODE_LIVE, 0, setup["limits"]["estop_stop"])[0] < STOP_FAULT
 

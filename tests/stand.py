@@ -1,4 +1,4 @@
-"""A test stand for single cycles: one compiled `cycle` with a two-joint arm, a well-behaved driver in Python and a time that is only counted.
+"""A test stand for single cycles: a two-joint arm, a well-behaved driver in Python and a time that is only counted.
 
 The joint positions are whatever the test sets: no physics. Faults are planted by changing what the driver says or when.
 """

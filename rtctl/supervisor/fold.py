@@ -27,7 +27,7 @@ from rtctl.kernels.compile import hot
 _N, _F, _0 = STOP_NONE, STOP_FAULT, STOP_NOW
 
 # What each watch demands in each mode (off, ready, live, braking, holding, latched). In off and ready a condition needs no stop:
-# it fails the checks. The e-stop's category comes from the limits file and acts in every mode; the operator's stop is in the request.
+# it fails the checks. The e-stop's category comes from the limits file and acts in every mode; the operator's is in the request.
 _TABLE = {
     "estop": (_F, _F, _F, _F, _F, _F),
     "state_invalid": (_N, _N, _0, _0, _0, _N),

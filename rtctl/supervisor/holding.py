@@ -1,4 +1,4 @@
-"""Torque without a law: braking (gravity plus damping) and holding (gravity plus damping plus a bounded spring to the pose reached)."""
+"""Torque without a law: braking is gravity plus damping; holding adds a bounded spring to the pose reached."""
 
 from rtctl.blocks import MODE_HOLDING
 from rtctl.kernels.compile import hot

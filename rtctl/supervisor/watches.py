@@ -1,7 +1,7 @@
 """The watches: every signal against its limit, each cycle, as a condition bit and a margin in [0, 1].
 
-Every test is written positively (`not (x <= limit)`), so that a number that is not finite trips it. A margin is 1 far from the limit
-and 0 at or beyond it. What a condition leads to in which mode is the table in `fold.py`; nothing here decides.
+Every test is written positively (`not (x <= limit)`), so that a number that is not finite trips it. A margin is 1 far
+from the limit and 0 at or beyond it. What a condition leads to in which mode is the table in `fold.py`; nothing here decides.
 """
 
 from rtctl.blocks import (
