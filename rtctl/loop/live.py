@@ -63,7 +63,8 @@ _LEAVE, _START, _RESET = offset("leave"), offset("start"), offset("reset")
 _SIDE_BEAT, _RUN, _ROW_COUNT = offset("side_beat"), offset("run"), offset("row_count")
 _WANTED, _USED = offset("pointer_wanted"), offset("pointer_used")
 _POINTERS_BYTES = POINTERS.itemsize
-_ROW_WORDS = ROW.itemsize // 8
+_ROW_BYTES = ROW.itemsize
+_ROW_WORDS = _ROW_BYTES // 8
 _STATE_WORDS = STATE.itemsize // 8
 MAX_WAKES = 4 * MAX_DRAIN  # of one wait for a state: a descriptor may also wake up for other reasons
 assert ROW.itemsize % 8 == 0 and STATE.itemsize % 8 == 0
@@ -361,7 +362,7 @@ def _keep_row(loop, row):  # type: ignore[no-untyped-def]
     if loop["ring"] != 0:
         ring_append(block_at(loop["ring"], RING), row)
     count = atomic_load(loop["control"] + _ROW_COUNT)
-    _copy_words(address_of(row), loop["rows"] + (count & 1) * ROW.itemsize, _ROW_WORDS)
+    _copy_words(address_of(row), loop["rows"] + (count & 1) * _ROW_BYTES, _ROW_WORDS)
     atomic_store(loop["control"] + _ROW_COUNT, count + 1)
     return OK
 

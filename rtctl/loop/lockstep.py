@@ -26,6 +26,9 @@ LOST_STATE = 1 << 32  # bits of the schedule beside the requests: the state, or 
 LOST_TORQUE = 1 << 33
 REQUEST_MASK = LOST_STATE - 1
 
+_ROW_BYTES = ROW.itemsize
+_ROW_WORDS = _ROW_BYTES // 8
+
 PLANT_FAILED = -1000  # added to what the plant returned
 CODEC_FAILED = -2000
 CYCLE_FAILED = -3000
@@ -146,8 +149,8 @@ def _keep_row(link, k):  # type: ignore[no-untyped-def]
     if link["ring"] != 0:
         ring_append(block_at(link["ring"], RING), link["row"])
     if link["rows"] != 0:
-        source = array_at(address_of(link["row"]), ROW.itemsize // 8, np.int64)
-        target = array_at(link["rows"] + k * ROW.itemsize, ROW.itemsize // 8, np.int64)
+        source = array_at(address_of(link["row"]), _ROW_WORDS, np.int64)
+        target = array_at(link["rows"] + k * _ROW_BYTES, _ROW_WORDS, np.int64)
         for i in range(source.size):
             target[i] = source[i]
     return OK
