@@ -15,7 +15,7 @@ SOURCES: dict[str, str] = {
     "msgpack-vectors": "kawanet/msgpack-test-suite, github.com: published values with every legal form of each.",
     "msgpack-python": "Python package msgpack >= 1.0, another implementation of the format.",
     "crc-check": "CRC catalogue of G. Cook, CRC-32/ISO-HDLC: check 0xCBF43926, residue 0xDEBB20E3 (from memory).",
-    "arm6_1986": "B. Armstrong, O. Khatib, J. Burdick, IEEE ICRA 1986, pp. 510-518, DOI 10.1109/ROBOT.1986.1087644; tables from memory.",
+    "arm6_1986": "Armstrong, Khatib, Burdick, IEEE ICRA 1986, pp. 510-518, doi 10.1109/ROBOT.1986.1087644; from memory.",
     "textbook mechanics": "Elementary mechanics, in every textbook; derived by hand in the test.",
     "textbook mathematics": "Elementary mathematics, in every textbook; derived by hand in the test.",
     "featherstone2008": "R. Featherstone, Rigid Body Dynamics Algorithms, Springer 2008.",
