@@ -3,10 +3,14 @@
 Each property is a sentence; a failure prints the shortest sequence of inputs that breaks it.
 """
 
+import ast
+import copy
+import inspect
 import itertools
+import textwrap
 from collections import deque
 from collections.abc import Callable, Iterator
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import pytest
 
@@ -75,41 +79,47 @@ class Step(NamedTuple):
 ALL_INPUTS = [Inputs(*values) for values in itertools.product(range(5), (False, True), (False, True), (False, True), range(3))]
 
 
-def step(mode: int, stop: int, inputs: Inputs, function: Callable[..., tuple[int, int, int]] = decide) -> Step:
+def step(mode: int, stop: int, inputs: Inputs, function: Any = decide) -> Step:
     return Step(mode, stop, inputs, *(int(value) for value in function(mode, stop, *inputs)))
 
 
-def reachable() -> dict[tuple[int, int], tuple[Step, ...]]:
-    """Every (mode, stop) that can be reached from `off`, with the shortest path to it."""
+Decide = Callable[..., tuple[int, int, int]]
+
+
+class Reached(NamedTuple):
+    """Every (mode, stop) reached from `off` with the shortest path to it, and every step from there."""
+
+    paths: dict[tuple[int, int], tuple[Step, ...]]
+    steps: list[Step]
+
+
+def reach(function: Decide) -> Reached:
+    """Walk all inputs from `off` until nothing new is found."""
     paths: dict[tuple[int, int], tuple[Step, ...]] = {(MODE_OFF, STOP_NONE): ()}
+    steps = []
     queue = deque(paths)
     while queue:
         here = queue.popleft()
         for inputs in ALL_INPUTS:
-            taken = step(*here, inputs)
+            taken = step(*here, inputs, function)
+            steps.append(taken)
             there = (taken.next_mode, taken.next_stop)
             if there not in paths:
                 paths[there] = (*paths[here], taken)
                 queue.append(there)
-    return paths
+    return Reached(paths, steps)
 
 
-REACHABLE = reachable()
+REACHED = reach(decide)
 
 
-def reachable_steps() -> Iterator[Step]:
-    for mode, stop in REACHABLE:
-        for inputs in ALL_INPUTS:
-            yield step(mode, stop, inputs)
-
-
-def shortest_break(rule: Callable[[Step], bool]) -> str:
+def shortest_break(rule: Callable[[Step], bool], reached: Reached = REACHED) -> str:
     """Empty when the rule holds in every reachable step, else the shortest sequence that breaks it."""
-    broken = [taken for taken in reachable_steps() if not rule(taken)]
+    broken = [taken for taken in reached.steps if not rule(taken)]
     if not broken:
         return ""
-    worst = min(broken, key=lambda taken: len(REACHABLE[(taken.mode, taken.stop)]))
-    return "\n".join(str(taken) for taken in (*REACHABLE[(worst.mode, worst.stop)], worst))
+    worst = min(broken, key=lambda taken: len(reached.paths[(taken.mode, taken.stop)]))
+    return "\n".join(str(taken) for taken in (*reached.paths[(worst.mode, worst.stop)], worst))
 
 
 def only_reset_leaves_latched(s: Step) -> bool:
@@ -245,7 +255,7 @@ def test_there_are_enough_rules() -> None:
 
 def test_every_mode_is_reached() -> None:
     """All modes can be reached from off, so the rules speak about all of them."""
-    assert {mode for mode, _ in REACHABLE} == set(range(len(MODE_NAMES)))
+    assert {mode for mode, _ in REACHED.paths} == set(range(len(MODE_NAMES)))
 
 
 def test_compiled_equals_interpreted_on_all_inputs() -> None:
@@ -277,3 +287,57 @@ def test_the_usual_day() -> None:
         taken = step(mode, stop, inputs)
         assert taken.next_mode == expected, str(taken)
         mode, stop = taken.next_mode, taken.next_stop
+
+
+# ---- mutation: each guard flipped once; a mutant that no sentence catches is a hole in the sentences ------------------------------
+
+FLIPS = {ast.Eq: ast.NotEq, ast.NotEq: ast.Eq, ast.Gt: ast.GtE, ast.GtE: ast.Gt, ast.Lt: ast.LtE, ast.LtE: ast.Lt}
+
+
+def mutants() -> Iterator[tuple[str, Decide]]:
+    """The decision function with one comparison flipped, one `and`/`or` swapped, one condition dropped or one `not` removed."""
+    source = textwrap.dedent(inspect.getsource(decide.py_func)).split("\n", 1)[1]
+    tree = ast.parse(source)
+    namespace = vars(inspect.getmodule(decide.py_func))
+    nodes = list(ast.walk(tree))
+    for k, node in enumerate(nodes):
+        for label, change in changes(node):
+            mutated = copy.deepcopy(tree)
+            change(list(ast.walk(mutated))[k])
+            scope = dict(namespace)
+            exec(compile(ast.fix_missing_locations(mutated), "<mutant>", "exec"), scope)  # our own function, changed once
+            yield f"line {node.lineno}: {label} in `{ast.unparse(node)}`", scope["decide"]
+
+
+def changes(node: ast.AST) -> list[tuple[str, Callable[[Any], None]]]:
+    """What may be changed in this node, one thing at a time."""
+    found: list[tuple[str, Callable[[Any], None]]] = []
+    if isinstance(node, ast.Compare) and type(node.ops[0]) in FLIPS:
+        found.append(("comparison flipped", lambda n: n.ops.__setitem__(0, FLIPS[type(n.ops[0])]())))
+    if isinstance(node, ast.BoolOp):
+        other = ast.Or if isinstance(node.op, ast.And) else ast.And
+        found.append(("and/or swapped", lambda n: setattr(n, "op", other())))
+        for k in range(len(node.values)):
+            found.append(
+                (f"condition {k + 1} dropped", lambda n, k=k: n.values.__setitem__(k, ast.Constant(isinstance(n.op, ast.And))))
+            )
+    if isinstance(node, ast.If) and isinstance(node.test, ast.UnaryOp):
+        found.append(("not removed", lambda n: setattr(n, "test", n.test.operand)))
+    return found
+
+
+def same(function: Decide) -> bool:
+    """True when the mutant gives the same answer in every reachable state for every input: it is the same function there."""
+    return all(step(taken.mode, taken.stop, taken.inputs, function) == taken for taken in REACHED.steps)
+
+
+def test_every_mutant_of_a_guard_is_caught_by_a_sentence() -> None:
+    """Each flipped or dropped guard breaks at least one named sentence, unless it changes no reachable answer at all."""
+    count, missed = 0, []
+    for label, mutant in mutants():
+        count += 1
+        reached = reach(mutant)
+        if not any(shortest_break(rule, reached) for rule in RULES) and not same(mutant):
+            missed.append(label)
+    assert count >= 40
+    assert not missed, "not caught:\n" + "\n".join(missed)
