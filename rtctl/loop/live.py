@@ -39,7 +39,7 @@ from rtctl.kernels.external import (
     wait_readable,
 )
 from rtctl.kernels.layout import OK
-from rtctl.kernels.memory import address_of, array_at, atomic_exchange, atomic_load, atomic_store, block_at
+from rtctl.kernels.memory import address_of, array_at, atomic_exchange, atomic_load, atomic_store, block_at, call_address
 from rtctl.loop.blocks import (
     BIN_NS,
     BINS,
@@ -115,6 +115,27 @@ def run_loop(loop, setup, memory, inp, torque, row):  # type: ignore[no-untyped-
             result = CYCLES_DONE
     atomic_store(control + _RUN, RUN_ENDED)
     return result
+
+
+@hot
+def warm_pointers(setup, pointers, memory, row):  # type: ignore[no-untyped-def]
+    """Call the law and the reference once, on blocks that are thrown away: their first call brings their code into memory."""
+    sample = address_of(memory["sample"])
+    reference = address_of(setup["reference"])
+    call_address(pointers["reference_begin"], (reference, address_of(memory["reference"]), sample))
+    call_address(pointers["reference_sample"], (reference, address_of(memory["reference"]), sample))
+    memory["law_input"]["n"] = setup["model"]["n"]
+    return call_address(
+        pointers["law"],
+        (
+            address_of(setup["model"]),
+            address_of(memory["law_input"]),
+            address_of(pointers["law_parameters"]),
+            address_of(memory["law"]),
+            address_of(memory["scratch"]),
+            row["terms"][:].ctypes.data,
+        ),
+    )
 
 
 # ---- waiting and receiving -----------------------------------------------------------------------------------------------------
