@@ -237,6 +237,45 @@ def test_a_drive_that_breaks_one_rule_is_refused(stand, changes, reason):
     assert stand.cycle() == 5.0
 
 
+def test_a_repeated_message_is_refused(stand):
+    """The same bytes a second time do not count: an equal sequence is an old one."""
+    stand.driving()
+    message = stand.message(DRIVE, 5.0)
+    assert stand.duty.receive(message, stand.now_ns)
+    assert not stand.duty.receive(message, stand.now_ns)
+    assert stand.duty.refused == {"sequence": 1}
+
+
+def test_a_state_too_long_ago_is_not_mistaken_for_a_fresh_one(stand):
+    """An answered state whose sample time is forgotten is refused, although a newer state has taken its place in the list."""
+    stand.granted()
+    for _ in range(300):
+        stand.send(ASK)
+        stand.cycle()
+    assert not stand.send(DRIVE, 5.0, state_sequence=stand.duty.sequence - template.HISTORY)
+    assert stand.duty.refused == {"answered state": 1}
+
+
+def test_a_damaged_frame_is_refused(stand):
+    """A wrong CRC, a byte behind the message and a message in another shape are refused and counted."""
+    stand.driving()
+    message = stand.message(DRIVE, 5.0)
+    for data, reason in (
+        (message[:-1] + bytes([message[-1] ^ 1]), "crc"),
+        (message + b"\x00", "form"),
+        (message[:-1], "form"),
+        (b"", "length"),
+        (bytes(1025), "length"),
+        (b"\xc0", "form"),
+        (b"\x90", "form"),
+        (msgpack.packb([1] * 13), "form"),
+    ):
+        stand.duty.refused.clear()
+        assert not stand.duty.receive(data, stand.now_ns)
+        assert stand.duty.refused == {reason: 1}
+    assert stand.duty.receive(message, stand.now_ns)
+
+
 def test_validity_runs_from_the_answered_sample(stand):
     """A torque counts until sample time plus the smaller of valid-for and the driver's maximum, however late it was sent."""
     stand.driving()
@@ -320,6 +359,10 @@ def test_release_in_motion_damps_first(stand):
     assert stand.send(RELEASE, valid_for_ns=0, grant=0, state_sequence=0)
     assert stand.cycle() == pytest.approx(-template.REST_DAMPING[0] * 0.5, abs=0)
     assert not stand.closed
+    stand.qd = 0.0
+    stand.cycle(60)
+    assert (stand.duty.phase, stand.closed) == ("closing", True)
+    assert stand.command == [0.0]  # the torque from the motion is not kept
 
 
 @pytest.mark.parametrize("trouble", ["fault", "not enabled", "stop chain", "position", "velocity"])
@@ -453,7 +496,7 @@ def test_the_template_moves_its_toy_over_real_sockets(folder):
         assert released
         assert state["holder"] == 0
         assert state["status"] & BRAKE
-        assert state["grant"] == 1, "the grant lapsed in between"
+        assert state["grant"] >= 1  # on a busy computer a grant may lapse on the way; the next one is asked for
         assert state["applied_session"] == state["received_session"] == ME
         assert abs(q - goal) < 0.01  # a toy without gravity stays where it was released
 
@@ -463,7 +506,7 @@ def test_the_template_moves_its_toy_over_real_sockets(folder):
         assert "refused messages" in output
     finally:
         process.kill()
-        process.wait()
+        process.communicate()
         context.destroy(linger=0)
 
 
