@@ -20,6 +20,7 @@ from rtctl.record.reader import Record
 if TYPE_CHECKING:
     from rich.table import Table
 
+SPAN_TOLERANCE = 0.01  # counted motion may differ by this much between records: a few late cycles, not a stop
 SAME = ("arm", "limits", "reference")  # hashes that must agree for a fair comparison
 
 
@@ -84,6 +85,11 @@ class Metrics:
     simulated: bool
     stops: tuple[str, ...]  # first causes, in order
     events: tuple[Event, ...]
+
+    @property
+    def faults(self) -> tuple[str, ...]:
+        """First causes other than a stop that was asked for."""
+        return tuple(stop for stop in self.stops if stop != "operator_stop")
 
     def as_json(self) -> dict[str, Any]:
         """Plain values with the unit at the end of each key; what cannot be counted is null."""
@@ -167,7 +173,7 @@ def events(record: Record) -> tuple[Event, ...]:
         elif stop[row] != STOP_NONE and (before < 0 or stop[row] > stop[before]):
             add(int(row), "stop", f"stricter: {_name(header['stops'], stop[row])}")
         if before < 0 or mode[row] != mode[before]:
-            came = "" if before < 0 else f"{_name(header['modes'], mode[before])} to "
+            came = "begins " if before < 0 else f"{_name(header['modes'], mode[before])} to "
             add(int(row), "mode", came + _name(header["modes"], mode[row]))
     return tuple(found)
 
@@ -329,14 +335,19 @@ class Comparison:
         return text.getvalue()
 
     def table(self) -> "Table":
-        """The main numbers for a terminal: one line per record."""
+        """The main numbers for a terminal: one line per record, what stands against the comparison below."""
+        from rich import box
         from rich.table import Table
+        from rich.text import Text
 
-        table = Table(title=None, caption=self.caption() or None, caption_justify="left")
+        table = Table(
+            box=box.SIMPLE_HEAD, caption=Text(self.caption()) if self.findings else None, caption_justify="left", padding=(0, 1)
+        )
         for heading in table_headings(self.metrics):
-            table.add_column(heading, justify="left" if heading in ("record", "stops") else "right")
+            left = heading in ("record", "stops")
+            table.add_column(Text(heading), justify="left" if left else "right", no_wrap=heading != "stops", vertical="bottom")
         for metrics in self.metrics:
-            table.add_row(*table_line(metrics, self.metrics))
+            table.add_row(*(Text(cell) for cell in table_line(metrics, self.metrics)))
         return table
 
     def caption(self) -> str:
@@ -350,17 +361,16 @@ def _sliding(all_metrics: Sequence[Metrics]) -> bool:
 
 def table_headings(all_metrics: Sequence[Metrics]) -> list[str]:
     """Headings of the table, with units."""
-    sliding = ["RMS error\n[mm]", "peak error\n[mm]", "effort\n[N^2 s]"] if _sliding(all_metrics) else []
+    sliding = ["RMS\nerror\n[mm]", "peak\nerror\n[mm]", "effort\n[N^2 s]"] if _sliding(all_metrics) else []
     return [
         "record",
-        "RMS error\n[mrad]",
-        "peak error\n[mrad]",
+        "RMS\nerror\n[mrad]",
+        "peak\nerror\n[mrad]",
         "effort\n[N^2 m^2 s]",
         *sliding,
-        "saturated\n[%]",
-        "torque rate\nRMS [N m/s]",
-        "late p50 / p99 / max\n[us]",
-        "cycle p50 / p99\n[us]",
+        "satu-\nrated\n[%]",
+        "late [us]\np50/p99/max",
+        "cost [us]\np50/p99",
         "states\nmissed",
         "stops",
     ]
@@ -376,12 +386,15 @@ def table_line(metrics: Metrics, all_metrics: Sequence[Metrics]) -> list[str]:
         _number(metrics.effort_nm2_s),
         *(sliding if _sliding(all_metrics) else []),
         _number(100.0 * metrics.saturation_ratio),
-        _number(metrics.rms_torque_rate_nm_s),
-        " / ".join(_number(1e-3 * value) for value in (metrics.late_p50_ns, metrics.late_p99_ns, metrics.late_max_ns)),
-        " / ".join(_number(1e-3 * value) for value in (metrics.cost_p50_ns, metrics.cost_p99_ns)),
+        _microseconds(metrics.late_p50_ns, metrics.late_p99_ns, metrics.late_max_ns),
+        _microseconds(metrics.cost_p50_ns, metrics.cost_p99_ns),
         str(metrics.missed_state_count),
         ", ".join(metrics.stops) or "none",
     ]
+
+
+def _microseconds(*values_ns: float) -> str:
+    return "/".join(f"{1e-3 * value:.0f}" if np.isfinite(value) else "-" for value in values_ns)
 
 
 def _number(value: float) -> str:
@@ -438,13 +451,12 @@ def _against(record: Record, metrics: Metrics) -> list[Finding]:
         found.append(
             _warning(metrics.label, "a run in which the law was in force", "none", next_step="There is no error to count.")
         )
-    faults = [stop for stop in metrics.stops if stop != "operator_stop"]
-    if faults:
+    if metrics.faults:
         found.append(
             _warning(
                 metrics.label,
                 "a run without a fault",
-                ", ".join(faults),
+                ", ".join(metrics.faults),
                 next_step="Errors and effort cover the time before the stop only.",
             )
         )
@@ -467,6 +479,16 @@ def _against_first(first: Record, first_metrics: Metrics, record: Record, metric
                     next_step="Not comparable: repeat the runs with one arm file, one limits file and one reference.",
                 )
             )
+    span_s, first_span_s = metrics.counted_s, first_metrics.counted_s
+    if abs(span_s - first_span_s) > SPAN_TOLERANCE * first_span_s:
+        found.append(
+            _warning(
+                metrics.label,
+                f"run over the same time of motion as {first_metrics.label} ({first_span_s:.3f} s)",
+                f"{span_s:.3f} s",
+                next_step="Their efforts are not comparable.",
+            )
+        )
     if metrics.simulated != first_metrics.simulated:
         kinds = {True: "a simulated arm", False: "a real arm"}
         found.append(

@@ -22,6 +22,7 @@ class Record:
     complete: bool  # ended by the recorder and undamaged
     lost_rows: int  # overwritten in the ring before they could be recorded
     damage: str | None  # why the file could not be read to its end
+    seal: str  # SHA-256 of the last whole object, hex: stands for everything before it
     reason: str | None  # why the recording ended, None when it was not ended
 
     @property
@@ -68,11 +69,13 @@ def _read(place: Path, file: BinaryIO) -> Record:
         )
     header = msgpack.unpackb(head.content)
     layout = np.dtype([(column["name"], "<" + column["type"], tuple(column["shape"])) for column in header["columns"]])
+    last_seal = head.seal
     blocks: list[Piece] = []
     end: Piece | None = None
     damage_text: str | None = None
     try:
         for piece in stream:
+            last_seal = piece.seal
             if piece.first == CLOSE:
                 end = piece
             else:
@@ -95,6 +98,7 @@ def _read(place: Path, file: BinaryIO) -> Record:
         complete=end is not None and damage_text is None,
         lost_rows=max(last - len(rows), int(note.get("lost_rows", 0))),
         damage=damage_text,
+        seal=last_seal.hex(),
         reason=note.get("reason"),
     )
 

@@ -122,7 +122,7 @@ def test_stops_and_modes_are_events(record: Record) -> None:
     metrics = measure(record)
     assert metrics.stops == ("operator_stop",)
     assert [(event.row, event.what, event.text) for event in metrics.events] == [
-        (0, "mode", "ready"),
+        (0, "mode", "begins ready"),
         (READY, "mode", "ready to live"),
         (READY + MOVING, "stop", "operator_stop (category 1, commanded)"),
         (READY + MOVING, "mode", "live to braking"),
@@ -201,6 +201,17 @@ def test_simulated_and_real_are_not_mixed_silently(record: Record) -> None:
     real = replace(record, header={**record.header, "simulated": False}, path="real.record")
     assert [str(finding) for finding in compare([record, real]).findings] == [
         "pd (real.record): must be run on a simulated arm as pd (sine.record), got a real arm."
+    ]
+
+
+def test_a_shorter_motion_is_marked(record: Record) -> None:
+    """A run that covered less of the motion took less effort for that reason alone."""
+    short = record.columns["mode"].copy()
+    short[READY + 800 :] = MODE_BRAKING
+    other = replace(record, columns={**record.columns, "mode": short}, path="short.record")
+    assert [str(finding) for finding in compare([record, other]).findings] == [
+        "pd (short.record): must be run over the same time of motion as pd (sine.record) (1.000 s), got 0.800 s. "
+        "Their efforts are not comparable."
     ]
 
 
