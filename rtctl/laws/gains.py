@@ -109,12 +109,11 @@ def damping_gains(arm: "Arm", law: str, gains: Mapping[str, Any]) -> np.void:
 def torque_gains(arm: "Arm", law: str, gains: Mapping[str, Any], integral: bool = False) -> np.void:
     """LAW_PARAMETERS of a law whose feedback is a torque: Kp N m/rad, Kd N m s/rad, Ki N m/(rad s), integral_max N m."""
     own = ("kp_nm_rad", "kd_nm_s_rad", *(("ki_nm_rad_s",) if integral else ()))
-    bound = ("integral_max_nm",) if integral else ()
-    rate = (RATE_KEY,) if integral else ()
-    table = GainTable(arm, law, gains, (*own, *MOTION_KEYS, *rate, *bound))
+    bound = "integral_max_nm"
+    table = GainTable(arm, law, gains, (*own, *MOTION_KEYS, *((RATE_KEY, bound) if integral else ())))
     inertia = middle_inertia(arm)
     Kp, Kd, Ki = _feedback(table, own, integral, inertia)
-    limit = table.values(bound[0]) if integral else np.zeros(arm.n)
+    limit = table.values(bound) if integral else np.zeros(arm.n)
     viscous = arm.model["viscous"][: arm.n]
     _check_routh(table, own, Ki, Kp * (Kd + viscous) / inertia, "Kp (Kd + viscous) / inertia of the joint")
     return table.parameters(Kp=Kp, Kd=Kd, Ki=Ki, integral_max=limit)
