@@ -224,11 +224,15 @@ class Duty:
 
 def bind(context: zmq.Context[Any], kind: int, endpoint: str) -> zmq.Socket[Any]:
     """A bound socket. One lock file per endpoint, held until the process ends: libzmq would take it over from a running driver."""
+    if not endpoint.startswith("ipc:///"):
+        raise SystemExit(
+            f"{endpoint}: must be ipc:///..., which stays on this computer; TCP would need keys and a list of clients."
+        )
     folder = os.path.dirname(endpoint.removeprefix("ipc://"))
     os.makedirs(folder, mode=0o700, exist_ok=True)
     info = os.stat(folder)
-    if not endpoint.startswith("ipc:///") or info.st_uid != os.getuid() or info.st_mode & 0o077:
-        raise SystemExit(f"{endpoint}: must be ipc:///... in a folder only this user can enter (chmod 700); TCP would need keys.")
+    if info.st_uid != os.getuid() or info.st_mode & 0o077:
+        raise SystemExit(f"{endpoint}: must be in a folder only this user can enter. Run: chmod 700 {folder}")
     lock = os.open(endpoint.removeprefix("ipc://") + ".lock", os.O_CREAT | os.O_RDWR | os.O_CLOEXEC, 0o600)
     try:
         fcntl.flock(lock, fcntl.LOCK_EX | fcntl.LOCK_NB)

@@ -1,4 +1,4 @@
-"""The compiled codec against the msgpack package, published vectors and every legal form; fuzzing is in test_codec_fuzz.py."""
+"""The compiled codec against the msgpack package, published vectors and every legal form; fuzzing is in tests/faults."""
 
 import struct
 

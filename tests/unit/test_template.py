@@ -515,9 +515,10 @@ def test_an_endpoint_others_could_reach_is_refused(folder):
     """A folder that others can enter, and a TCP endpoint, are refused before anything is bound."""
     os.chmod(folder, 0o755)
     output = start(folder).communicate(timeout=10)[0]
-    assert "in a folder only this user can enter" in output
+    assert f"must be in a folder only this user can enter. Run: chmod 700 {folder}" in output
     assert not (Path(folder) / "state").exists()
     command = [sys.executable, template.__file__, "--demo", "--state", "tcp://127.0.0.1:5555"]
-    run = subprocess.run(command, capture_output=True, text=True, timeout=10)
+    run = subprocess.run(command, capture_output=True, text=True, timeout=10, cwd=folder)
     assert run.returncode != 0
     assert "TCP would need keys" in run.stderr
+    assert not list(Path(folder).iterdir())
