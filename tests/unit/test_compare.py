@@ -140,6 +140,15 @@ def test_a_dwell_inside_the_motion_counts_and_its_end_does_not(record: Record) -
     assert counted.sum() == 900
 
 
+def test_rows_out_of_force_inside_the_motion_do_not_count(record: Record) -> None:
+    """A stop and a new start within one record: only the rows in which the law was in force count."""
+    mode = record.columns["mode"].copy()
+    mode[READY + 300 : READY + 420] = MODE_BRAKING
+    counted = counted_rows(replace(record, columns={**record.columns, "mode": mode}))
+    assert counted.sum() == MOVING - 120
+    assert not counted[READY + 300 : READY + 420].any()
+
+
 def test_a_hold_counts_all_live_rows(record: Record) -> None:
     """A reference that never moves is judged over the whole time in force."""
     still = replace(record, columns={**record.columns, "qd_ref": np.zeros_like(record.columns["qd_ref"])})

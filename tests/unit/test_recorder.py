@@ -39,6 +39,17 @@ def test_a_closed_ring_is_drained_and_removed(ring: Ring) -> None:
     assert ring.recorder_status().state == "done"
 
 
+def test_a_run_ends_only_when_the_last_row_is_in_the_record(ring: Ring) -> None:
+    """With more rows left at the end than one block takes, the close mark waits for all of them."""
+    recorder = start(ring)
+    recorder._rows_per_block = 8
+    append_rows(ring, 0, 50)
+    ring.close()
+    assert record(recorder)
+    found = read_record(recorder.path)
+    assert (list(found.columns["cycle"]), found.complete) == (list(range(50)), True)
+
+
 def test_an_ended_controller_ends_the_record(ring: Ring) -> None:
     """Without the process that made the ring there are no more rows to wait for."""
     recorder = start(ring)
