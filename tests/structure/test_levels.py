@@ -13,7 +13,7 @@ from tests.structure.sources_of import TOP, module_name, place, python_files, tr
 LEVELS = {
     "rtctl.errors": 0,
     "rtctl.causes": 0,
-    "rtctl.places": 0,
+    "rtctl.places": 0.5,
     "rtctl.progress": 0,
     "rtctl.kernels": 1,
     "rtctl.blocks": 1.5,
@@ -30,7 +30,7 @@ LEVELS = {
     "rtctl.loop": 8,
     "rtctl.vet": 9,
     "rtctl.compare": 9,
-    "rtctl.report": 9,
+    "rtctl.report": 9.2,  # shows what compare counts
     "rtctl.run": 9,
     "rtctl.demo": 9.5,  # does the other jobs one after the other
     "rtctl.cli": 10,
