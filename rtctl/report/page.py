@@ -175,7 +175,10 @@ def _save() -> str:
 
 def _drawings(records: Sequence[Record], metrics: Sequence[Metrics]) -> str:
     drawn = (
-        (effort_against_error(metrics), "Lower left is better: less error for less torque. Both numbers cover the same rows."),
+        (
+            effort_against_error(metrics) if len(metrics) > 1 else "",
+            "Lower left is better: less error for less torque. Both numbers cover the same rows.",
+        ),
         (
             lateness_histogram(records, metrics),
             "How late each cycle woke up. Both axes are logarithmic, so that single late cycles stay visible; the mark is the "
