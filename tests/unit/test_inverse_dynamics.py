@@ -98,14 +98,14 @@ def test_bias_is_inverse_dynamics_at_rest_of_acceleration() -> None:
     assert (tau == same).all() and not ws["zero"].any()
 
 
-@pytest.mark.parametrize("bad", [math.nan, math.inf])
-def test_not_a_number_goes_through(bad: float) -> None:
+def test_not_a_number_goes_through() -> None:
     """A measured value that is not a finite number is never turned into a torque that looks sane."""
     model, ws, tau = LONG_TWO_LINK.arm.model, new_block(SCRATCH), np.zeros(16)
-    kernels.gravity_torque(model, np.array([bad, 0.1]), ws, tau)
-    assert not np.isfinite(tau[:2]).any()
-    kernels.bias_torque(model, np.array([0.1, 0.1]), np.array([bad, 0.0]), ws, tau)
-    assert not np.isfinite(tau[1])
+    kernels.gravity_torque(model, np.array([math.nan, 0.1]), ws, tau)
+    assert np.isnan(tau[:2]).all()
+    for bad in (math.nan, math.inf):
+        kernels.bias_torque(model, np.array([0.1, 0.1]), np.array([bad, 0.0]), ws, tau)
+        assert not np.isfinite(tau[1])
 
 
 def test_only_n_elements_are_written() -> None:
