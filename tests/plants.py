@@ -71,6 +71,7 @@ def true_arm(model: np.void, **values: Any) -> tuple[np.void, np.void]:
     setup["arm_key"], setup["session"] = KEY, DRIVER
     setup["period_ns"], setup["substeps"] = MS, 10
     setup["tau_max"] = 100.0
+    setup["qd_max"] = np.inf
     setup["valid_for_max_ns"] = 20 * MS
     setup["silent_max_ns"] = 100 * MS
     setup["still_qd"] = 0.02

@@ -71,6 +71,7 @@ PLANT_SETUP = np.dtype(
         ("torque_delay", "i8"),
         # ---- the driver's own rules
         ("tau_max", "f8", _J),  # N m (N): drives saturate here, torque messages beyond are refused
+        ("qd_max", "f8", _J),  # rad/s (m/s), measured; faster than this ends the grant
         ("valid_for_max_ns", "i8"),  # the driver's own bound of a torque's validity
         ("silent_max_ns", "i8"),  # a holder that has not driven yet and is silent for longer loses the grant
         ("still_qd", "f8", _J),  # rad/s (m/s), measured; below it a joint is still
@@ -119,6 +120,7 @@ PLANT_MEMORY = np.dtype(
         ("deadline_ns", "i8"),  # of the torque in force
         ("tau_command", "f8", _J),  # last accepted torque
         ("stop_chain_closed", "i8"),  # tests and drills open it
+        ("retired", "i8"),  # 1: the driver is about to end and grants nothing
         ("fault", "i8"),  # 1: the driver reports a fault and gives no torque
         # ---- measured at the last sample
         ("sequence", "i8"),
@@ -143,6 +145,7 @@ PLANT_MEMORY = np.dtype(
         ("accepted", "i8"),  # drive messages
         ("refused", "i8", 16),  # by -REFUSED_ code
         ("lapses", "i8"),
+        ("overspeeds", "i8"),
         ("grants", "i8"),
         ("saturated", "i8"),  # substeps with a drive at its limit
         ("skipped_ns", "i8"),  # time jumped over because the process stood still too long

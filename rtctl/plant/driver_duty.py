@@ -5,6 +5,7 @@ The rules are those of `drivers/WIRE.md`; every refusal has a code and is counte
 
     plant_receive   one decoded torque message has arrived
     plant_advance   driver duties and motion up to now
+    plant_retire    the driver is about to end
     plant_state     the newest state that has passed the delay line
 """
 
@@ -174,6 +175,7 @@ def _may_grant(setup, memory, now_ns):
     return (
         memory["phase"] == PHASE_STILL
         and _is_still(setup, memory, now_ns)
+        and memory["retired"] == 0
         and memory["fault"] == 0
         and memory["stop_chain_closed"] == 1
     )
@@ -233,10 +235,22 @@ def _check_lapse(setup, memory, now_ns):
 
 
 @hot
+def _speed_allowed(setup, memory):
+    """True if every measured speed is within the driver's own limit."""
+    for i in range(setup["model"]["n"]):
+        if not abs(memory["qd_meas"][i]) <= setup["qd_max"][i]:
+            return False
+    return True
+
+
+@hot
 def _update_phase(setup, memory, now_ns):
-    """Lapse, fault, brakes and the parts of the rest policy, as time goes on."""
+    """Lapse, fault, overspeed, brakes and the parts of the rest policy, as time goes on."""
     _check_lapse(setup, memory, now_ns)
     if memory["holder"] != 0 and (memory["fault"] != 0 or memory["stop_chain_closed"] == 0):
+        _end_grant(setup, memory, now_ns, False)
+    if memory["holder"] != 0 and not _speed_allowed(setup, memory):
+        memory["overspeeds"] += 1
         _end_grant(setup, memory, now_ns, False)
     if memory["brake"] == BRAKE_OPENING and now_ns - memory["brake_since_ns"] >= setup["brake_open_ns"]:
         _set_brake(memory, BRAKE_OPEN, now_ns)
@@ -304,6 +318,15 @@ def plant_start(setup, memory, now_ns):
     memory["stop_chain_closed"] = 1
     memory["moving_since_ns"] = now_ns
     return _sample(setup, memory)
+
+
+@hot
+def plant_retire(setup, memory, now_ns):
+    """The driver is about to end: the grant is over, the rest policy takes over, and nobody gets a grant any more. Returns OK."""
+    memory["retired"] = 1
+    if memory["holder"] != 0:
+        _end_grant(setup, memory, now_ns, True)
+    return OK
 
 
 @hot

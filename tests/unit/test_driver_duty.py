@@ -20,7 +20,7 @@ from rtctl.blocks import (
 from rtctl.kernels.layout import OK, new_block
 from rtctl.plant import blocks
 from rtctl.plant.blocks import PHASE_CLOSING, PHASE_DRIVE, PHASE_MOVING, PHASE_STILL, PLANT_MEMORY
-from rtctl.plant.driver_duty import plant_advance, plant_receive, plant_start, plant_state
+from rtctl.plant.driver_duty import plant_advance, plant_receive, plant_retire, plant_start, plant_state
 from tests.plants import DRIVER, GRAVITY, MS, SECOND, Controller, chain_model, slider_model, true_arm
 
 HOLD = (0.0, 0.0)  # two hanging rods need no torque
@@ -443,6 +443,31 @@ def test_a_fault_or_open_stop_chain_ends_the_grant_and_closes_the_brakes_unpower
     assert not state["status"] & STATUS_ENABLED
     assert bool(state["status"] & STATUS_FAULT) == (wrong == "fault")
     assert bool(state["status"] & STATUS_STOP_CHAIN_CLOSED) == (wrong == "fault")
+
+
+def test_a_joint_faster_than_the_drivers_own_limit_ends_the_grant():
+    """The driver does not wait for the controller: above its own speed limit the rest policy takes over."""
+    _, memory, controller = driven_arm(qd_max=[1.0, 1.0])
+    memory["qd"][0] = 0.9
+    controller.step(2)
+    assert controller.state["holder"] == controller.session
+    memory["qd"][0] = 1.5
+    assert controller.step(2)["holder"] == 0
+    assert memory["overspeeds"] == 1
+    assert controller.send(REQUEST_DRIVE, HOLD) == blocks.REFUSED_HOLDER
+
+
+def test_a_driver_about_to_end_brings_the_arm_to_rest_and_grants_nothing_more():
+    """The grant ends, a moving arm is damped, brakes close, and a new ask stays without an answer."""
+    setup, memory, controller = driven_arm()
+    kick(memory)
+    controller.step()
+    plant_retire(setup, memory, controller.now_ns)
+    assert controller.send(REQUEST_DRIVE, HOLD) == blocks.REFUSED_HOLDER
+    controller.step(1000)
+    assert (memory["phase"], memory["brake"]) == (PHASE_STILL, blocks.BRAKE_CLOSED)
+    controller.send()
+    assert controller.step()["holder"] == 0
 
 
 def test_release_while_the_brakes_open_leaves_them_closed():

@@ -292,6 +292,18 @@ def test_an_arm_resting_on_its_stop_stays_there():
     assert abs(memory["qd"][0]) < 1e-9
 
 
+@pytest.mark.parametrize(("coulomb", "leaves"), [(3.0, True), (150.0, False)])
+def test_a_compressed_stop_pushes_out_against_friction_or_is_held_by_it(coulomb, leaves):
+    """A slider at rest 1 cm inside a stop of 10 kN/m feels 100 N: below breakaway it stays exactly, above it is pushed out."""
+    model = slider_model(2.0)
+    model["coulomb"][0] = coulomb
+    setup, memory = true_arm(model, q_max=[0.0], q_min=[-1.0], stop_stiffness=1e4, stop_damping=10.0)
+    placed(setup, memory, [0.01], [0.0])
+    run(setup, memory, 0.1, 1e-4)
+    assert (memory["q"][0] <= 0.0) == leaves
+    assert (memory["q"][0] == 0.01) != leaves
+
+
 def test_drives_saturate():
     """The drives give their limit and count it, whatever is asked."""
     setup, memory = true_arm(slider_model(1.0), tau_max=[3.0])
