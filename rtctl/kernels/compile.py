@@ -9,6 +9,8 @@ import functools
 import hashlib
 import os
 import platform
+import re
+import shutil
 import stat
 import sys
 import types as python_types
@@ -19,7 +21,7 @@ from typing import Any, TypeVar
 import numba
 import numpy as np
 from numba.core import types
-from numba.core.caching import CompileResultCacheImpl, FunctionCache, _CacheLocator
+from numba.core.caching import CompileResultCacheImpl, FunctionCache, NullCache, _CacheLocator
 from numba.core.ccallback import CFunc
 
 from rtctl.errors import SetupError
@@ -27,6 +29,7 @@ from rtctl.errors import SetupError
 F = TypeVar("F", bound=Callable[..., Any])
 
 PACKAGE = Path(__file__).resolve().parents[1]
+KEPT_CACHES = 12
 # Places below the package that may hold compiled code; tests/structure checks that no other file uses `hot`.
 COMPILED_PLACES = (
     "blocks.py",
@@ -75,6 +78,8 @@ def cache_folder() -> Path:
     """The private folder of compiled code, made if missing. Raises `SetupError` if somebody else could write to it."""
     base = Path(os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache") / "rtctl"
     folder = base / cache_key()
+    if not folder.exists():
+        _remove_old(base)
     for path in (base, folder):
         path.mkdir(mode=0o700, parents=True, exist_ok=True)
         info = path.stat()
@@ -84,6 +89,13 @@ def cache_folder() -> Path:
                 f"Run: chown {os.getuid()} {path} && chmod 700 {path}"
             )
     return folder
+
+
+def _remove_old(base: Path) -> None:
+    """Keep the newest caches only: each change of a source file makes a new one. A process that loses its folder compiles again."""
+    folders = [path for path in base.glob("*") if path.is_dir() and re.fullmatch("[0-9a-f]{16}", path.name)]
+    for path in sorted(folders, key=lambda path: path.stat().st_mtime)[:-KEPT_CACHES]:
+        shutil.rmtree(path, ignore_errors=True)
 
 
 def _version(module: str) -> str:
@@ -97,13 +109,14 @@ def _processor() -> str:
 
 
 class _Locator(_CacheLocator):
-    """Puts the cache of every function into the one keyed folder."""
+    """Puts the cache of every function into the one keyed folder, one folder per module: two modules may share a file name."""
 
     def __init__(self, py_func: Any) -> None:
+        self._module = py_func.__module__
         self._place = f"{py_func.__module__}.{py_func.__qualname__}:{py_func.__code__.co_firstlineno}"
 
     def get_cache_path(self) -> str:
-        return str(cache_folder())
+        return str(cache_folder() / self._module)
 
     def get_source_stamp(self) -> str:
         return cache_key()
@@ -116,12 +129,18 @@ class _Locator(_CacheLocator):
         return cls(py_func)
 
 
-class _CacheImpl(CompileResultCacheImpl):
-    _locator_classes = [_Locator]
+class _CacheImpl(CompileResultCacheImpl):  # type: ignore[misc]  # numba's stubs leave its base untyped
+    _locator_classes: list[Any] = [_Locator]
 
 
 class _Cache(FunctionCache):
     _impl_class = _CacheImpl
+
+
+def _cache_of(function: Any) -> _Cache | NullCache:
+    """The cache on disk for a function of this package. Others are not cached: nobody hashes what they call."""
+    inside = Path(function.__code__.co_filename).resolve().is_relative_to(PACKAGE)
+    return _Cache(function) if inside else NullCache()
 
 
 def hot(function: F) -> F:
@@ -129,16 +148,16 @@ def hot(function: F) -> F:
 
     Inside: no allocation, no exceptions, no strings; outputs are arguments; the return value is a status, `OK` on success.
     """
-    dispatcher = numba.njit(nogil=True, error_model="numpy", fastmath=False)(function)
-    if not numba.config.DISABLE_JIT:
-        dispatcher._cache = _Cache(function)
-    return dispatcher
+    dispatcher: Any = numba.njit(nogil=True, error_model="numpy", fastmath=False)(function)
+    if dispatcher is not function:  # it is the function itself when compiling is switched off
+        dispatcher._cache = _cache_of(function)
+    return dispatcher  # type: ignore[no-any-return]  # a dispatcher is called like the function it stands for
 
 
 class Callback:
     """A compiled C function. `address` is its pointer; keep the object alive as long as the pointer is used."""
 
-    def __init__(self, compiled: CFunc) -> None:
+    def __init__(self, compiled: Any) -> None:
         self._compiled = compiled
         self.address = int(compiled.address)
 
@@ -161,7 +180,7 @@ def callback(template: Callable[..., Any], name: str, argument_count: int, **bou
     function.__module__ = template.__module__
     function.__qualname__ = f"{template.__qualname__}_{name}"
     signature = ((types.int64,) * argument_count, types.int64)
-    compiled = CFunc(function, signature, locals={}, options={"error_model": "numpy", "fastmath": False})
-    compiled._cache = _Cache(function)
+    compiled: Any = CFunc(function, signature, locals={}, options={"error_model": "numpy", "fastmath": False})
+    compiled._cache = _cache_of(function)
     compiled.compile()
     return Callback(compiled)
