@@ -80,6 +80,7 @@ def run_plant(setup, memory, loop):  # type: ignore[no-untyped-def]
     """
     scratch = loop["scratch"]
     period_ns = setup["period_ns"]
+    loop["leave_since_ns"] = 0
     loop["torque_fd"] = socket_option(loop["torque_socket"], ZMQ_FD, scratch)
     begin_ns = now_ns(CLOCK_MONOTONIC, scratch)
     deadline_ns = begin_ns
