@@ -350,6 +350,7 @@ LINK_MEMORY = np.dtype(  # what the controller remembers about the driver
 MEMORY = np.dtype(  # all hidden state of a cycle
     [
         ("cycle", "i8"),
+        ("elapsed_ns", "i8"),  # since the cycle before: one period and what was skipped
         ("supervisor", SUPERVISOR_MEMORY),
         ("link", LINK_MEMORY),
         ("law", LAW_MEMORY),

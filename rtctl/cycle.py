@@ -54,6 +54,7 @@ def cycle(setup, pointers, memory, inp, torque, row):  # type: ignore[no-untyped
     """
     supervisor = memory["supervisor"]
     mode = supervisor["mode"]
+    memory["elapsed_ns"] = setup["period_ns"] * (1 + inp["skipped"])
     used = observe(setup, memory, inp)
     _call_law(setup, pointers, memory, used, row)
 
@@ -95,9 +96,9 @@ def _call_law(setup, pointers, memory, used, row):  # type: ignore[no-untyped-de
     live = supervisor["mode"] == MODE_LIVE
     if live:
         if link["status"] & STATUS_BRAKE == 0:
-            supervisor["live_ns"] += setup["period_ns"]
+            supervisor["live_ns"] += memory["elapsed_ns"]
         elif supervisor["live_ns"] == 0:
-            supervisor["brake_wait_ns"] += setup["period_ns"]
+            supervisor["brake_wait_ns"] += memory["elapsed_ns"]
 
     if live and used == 1:
         # The reference waits until the ramp from holding torque to law torque is over.

@@ -180,9 +180,9 @@ def _watch_joints(setup, memory, row):  # type: ignore[no-untyped-def]
 
 
 @hot
-def _dwell(supervisor, w, now_bad, period_ns):  # type: ignore[no-untyped-def]
+def _dwell(supervisor, w, now_bad, elapsed_ns):  # type: ignore[no-untyped-def]
     """Time for which a condition has held without a break, in ns."""
-    supervisor["dwell_ns"][w] = supervisor["dwell_ns"][w] + period_ns if now_bad else 0
+    supervisor["dwell_ns"][w] = supervisor["dwell_ns"][w] + elapsed_ns if now_bad else 0
     return supervisor["dwell_ns"][w]
 
 
@@ -214,8 +214,8 @@ def _watch_law(setup, memory, row):  # type: ignore[no-untyped-def]
                 greedy = True
             m = margin(demand, limits["tau_max"][i])
             m_demand = m if m < m_demand else m_demand
-    far_ns = _dwell(supervisor, WATCH_TRACKING_ERROR, far, setup["period_ns"])
-    greedy_ns = _dwell(supervisor, WATCH_TORQUE_DEMAND, greedy, setup["period_ns"])
+    far_ns = _dwell(supervisor, WATCH_TRACKING_ERROR, far, memory["elapsed_ns"])
+    greedy_ns = _dwell(supervisor, WATCH_TORQUE_DEMAND, greedy, memory["elapsed_ns"])
     bits |= _put(row, WATCH_TRACKING_ERROR, far_ns > limits["error_dwell_ns"], m_error)
     bits |= _put(row, WATCH_TORQUE_DEMAND, greedy_ns > limits["demand_dwell_ns"], m_demand)
     return bits
@@ -277,7 +277,7 @@ def update_still(setup, memory, used):  # type: ignore[no-untyped-def]
     if not slow:
         supervisor["still_ns"] = 0
     elif used == 1:
-        supervisor["still_ns"] += setup["period_ns"]
+        supervisor["still_ns"] += memory["elapsed_ns"]
     return supervisor["still_ns"] > limits["still_dwell_ns"]
 
 
@@ -290,7 +290,7 @@ def update_checks(setup, memory, conditions, hold_fits, still):  # type: ignore[
     if not clear:
         supervisor["checks_ns"] = 0
     else:
-        supervisor["checks_ns"] += setup["period_ns"]
+        supervisor["checks_ns"] += memory["elapsed_ns"]
     if supervisor["mode"] == MODE_OFF:
         return supervisor["checks_ns"] > setup["limits"]["ready_dwell_ns"]
     return clear
