@@ -77,7 +77,7 @@ def load_arm(path: Path | str, simulation_only: bool = False) -> Arm:
     """
     from rtctl.config.toml_file import read_toml
 
-    return _arm(read_toml(path), simulation_only)
+    return arm_from_document(read_toml(path), simulation_only)
 
 
 def arm_from_parts(parts: Mapping[str, Any], simulation_only: bool = False, name: str = "arm") -> Arm:
@@ -90,7 +90,7 @@ def arm_from_parts(parts: Mapping[str, Any], simulation_only: bool = False, name
     from rtctl.config.toml_file import Document
 
     plain = _plain(parts)
-    return _arm(Document(name, plain), simulation_only)
+    return arm_from_document(Document(name, plain), simulation_only)
 
 
 def _plain(value: Any) -> Any:
@@ -113,7 +113,8 @@ def arm_key(name: str, joint_names: tuple[str, ...], units: tuple[str, ...]) -> 
     return int.from_bytes(hashlib.sha256("\n".join(lines).encode()).digest()[:ARM_KEY_BYTES], "big")
 
 
-def _arm(document: "Document", simulation_only: bool) -> Arm:
+def arm_from_document(document: "Document", simulation_only: bool = False) -> Arm:
+    """The arm of a document already read. Raises ConfigError or ModelError with everything that is wrong."""
     from rtctl.config.arm_file import check_arm
 
     description = check_arm(document, simulation_only)

@@ -166,6 +166,11 @@ def likely_cause(key: str, value: object) -> str:
             return "The number is written as text; take the quotes away."
     if isinstance(value, (int, float)) and not isinstance(value, bool) and unit == "rad" and abs(value) > TURN_RAD:
         return looks_like_degrees(value)
+    if isinstance(value, (int, float)) and not isinstance(value, bool):
+        if key.endswith("_s") and unit == "s" and value >= 1.0:
+            return f"It looks like milliseconds; {value:g} ms are {value / 1000.0:g} s."
+        if unit == "Hz" and 0.0 < value < 1.0:
+            return f"It looks like a period; one of {value:g} s is a rate of {1.0 / value:g} Hz."
     return ""
 
 

@@ -19,6 +19,8 @@ LEVELS = {
     "rtctl.blocks": 1.5,
     "rtctl.config": 2,
     "rtctl.arm": 3,
+    "rtctl.config.limits_file": 3.2,  # limits and runs are checked against an arm
+    "rtctl.config.run_file": 3.4,
     "rtctl.dynamics": 4,
     "rtctl.references": 4,
     "rtctl.laws": 4,
