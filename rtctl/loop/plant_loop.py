@@ -29,7 +29,7 @@ from rtctl.wire.codec import decode_torque, encode_state
 
 MAX_DRAIN = 64  # torque messages taken at one wake-up at most
 MAX_WAKES = 16  # for torque messages, within one period
-LEAVE_MAX_NS = 10_000_000_000  # an arm that does not come to rest by then is left as it is
+LEAVE_MAX_NS = 4_000_000_000  # an arm that does not come to rest by then is left as it is
 
 STOPPED = 1  # returned by the loop: the stop word was set
 TIME_OVER = 2

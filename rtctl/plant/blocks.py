@@ -66,7 +66,7 @@ PLANT_SETUP = np.dtype(
         ("arm_key", "i8"),
         ("session", "i8"),  # of this driver, below 2^53, new at every start
         ("period_ns", "i8"),  # of the state messages
-        ("substeps", "i8"),  # integration steps per period; divides period_ns
+        ("substeps", "i8"),  # integration steps per period
         ("state_delay", "i8"),  # transport, in periods
         ("torque_delay", "i8"),
         # ---- the driver's own rules

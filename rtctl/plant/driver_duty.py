@@ -334,22 +334,26 @@ def plant_advance(setup, memory, now_ns):
     """Driver duties and motion up to `now_ns`, in whole substeps; the first call starts. Returns OK or what a kernel returned."""
     if memory["started"] == 0:
         return plant_start(setup, memory, now_ns)
-    substep_ns = setup["period_ns"] // setup["substeps"]
-    dt = float(substep_ns) * 1e-9
+    period_ns = setup["period_ns"]
     behind_ns = now_ns - memory["time_ns"]
     if behind_ns > CATCH_UP_MAX_NS:
         # Whole periods, so that sample times stay on their grid; the last one is lived through, so that what has lapsed is noticed.
-        skip_ns = (behind_ns // setup["period_ns"] - 1) * setup["period_ns"]
+        skip_ns = (behind_ns // period_ns - 1) * period_ns
         memory["time_ns"] += skip_ns
         memory["skipped_ns"] += skip_ns
         memory["moving_since_ns"] += skip_ns
-    while memory["time_ns"] + substep_ns <= now_ns:
+    # A period that its substeps do not divide has substeps that differ by a nanosecond, never a drifting grid.
+    while True:
+        done_ns = period_ns * memory["substep"] // setup["substeps"]
+        substep_ns = period_ns * (memory["substep"] + 1) // setup["substeps"] - done_ns
+        if memory["time_ns"] + substep_ns > now_ns:
+            return OK
         if memory["substep"] == 0:
             _deliver(setup, memory)
         _update_phase(setup, memory, memory["time_ns"])
         status = _ask_torque(setup, memory)
         if status == OK:
-            status = substep(setup, memory, dt)
+            status = substep(setup, memory, float(substep_ns) * 1e-9)
         if status != OK:
             return status
         memory["time_ns"] += substep_ns
@@ -358,7 +362,6 @@ def plant_advance(setup, memory, now_ns):
             memory["substep"] = 0
             memory["step"] += 1
             _sample(setup, memory)
-    return OK
 
 
 @hot

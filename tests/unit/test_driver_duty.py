@@ -529,6 +529,18 @@ def test_position_is_counted_in_encoder_quanta_and_velocity_is_their_difference(
     assert np.mean(seen) * quantum / 1e-3 == pytest.approx(0.05, abs=quantum / 0.1)
 
 
+def test_samples_stay_on_the_grid_of_a_period_that_substeps_do_not_divide():
+    """At 300 Hz with 7 substeps, 900 periods are 900 times the period, and a free slider covers exactly its way."""
+    period_ns = 3_333_333
+    setup, memory = true_arm(slider_model(1.0), period_ns=period_ns, substeps=7, rest_still=blocks.REST_ZERO)
+    plant_start(setup, memory, 0)
+    memory["qd"][0] = 1.0
+    state = Controller(setup, memory).step(900)
+    assert state["sample_ns"] == 900 * period_ns
+    assert state["sequence"] == 901
+    assert state["q"][0] == pytest.approx(900 * period_ns * 1e-9, rel=1e-12)
+
+
 @pytest.mark.parametrize("delay", [0, 1, 2, 7, 63])
 def test_state_delay_is_exact(delay):
     """The state read at step k is the one sampled at step k - delay, whole; before that there is none."""
