@@ -30,6 +30,7 @@ LEVELS = {
     "rtctl.record": 7,
     "rtctl.plant": 7,
     "rtctl.loop": 8,
+    "rtctl.assembly": 6.5,
     "rtctl.vet": 9,
     "rtctl.compare": 9,
     "rtctl.report": 9.2,  # shows what compare counts
