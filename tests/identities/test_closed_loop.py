@@ -59,7 +59,7 @@ def test_the_sampled_stability_limit_separates_stable_from_unstable(share: float
 
 
 def test_the_computed_limits_are_the_known_ones() -> None:
-    """0.70 without latency and 0.32 with one sample, critical damping, velocity by backward difference; 1 with measured velocity."""
+    """0.70 without latency and 0.32 with one sample, critical damping, velocity by backward difference."""
     assert sampled_limit(0) == pytest.approx(0.70, abs=0.01)
     assert sampled_limit(1) == pytest.approx(0.32, abs=0.01)
 

@@ -12,7 +12,7 @@ from tests.sources import source
 
 @cache
 def tracked(run: str, law: str) -> tuple[float, float]:
-    """RMS tracking error over all joints, rad, and effort (time integral of the squared torques), N^2 m^2 s, of one whole motion."""
+    """RMS tracking error over all joints, rad, and effort (integral of the squared torques), N^2 m^2 s, of one motion."""
     rehearsal = Rehearsal(demo(run), law)
     rows = rehearsal.motion(5.5)
     ended = cause(int(rows["first_cause"][-1])).name
