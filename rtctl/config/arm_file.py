@@ -24,7 +24,7 @@ from typing import Annotated, Any, Literal
 
 import numpy as np
 import numpy.typing as npt
-from annotated_types import Ge, Gt
+from annotated_types import Ge, Gt, Le
 from pydantic import Field
 
 from rtctl.config.block_check import (
@@ -192,7 +192,7 @@ class Rest(Block):
     """What the driver does when nobody holds the grant: damping while the arm moves, then brake, gravity torque or no torque."""
 
     damping_nm_s_rad: Any = Field(description="a number >= 0 N m s/rad, or a list of one per moving joint")
-    moving_s: Positive
+    moving_s: Annotated[float, Gt(0.0), Le(10.0)]
     still: Literal["brake", "gravity", "zero"]
     source: Text | None = None
 
@@ -312,7 +312,8 @@ class _Reader:
             "a table with the viscous and Coulomb friction (0.0 if it is not known)",
         )
         model = {"revolute": RevoluteLimits, "continuous": ContinuousLimits, "prismatic": PrismaticLimits}[kind]
-        limits = self.block(model, (*path, "limits"), tables.get("limits"), "a table with the limits of the hardware")
+        raw = self.endless((*path, "limits"), tables.get("limits")) if kind == "continuous" else tables.get("limits")
+        limits = self.block(model, (*path, "limits"), raw, "a table with the limits of the hardware")
         reflected = self.reflected((*path, "drive"), drive, slides) if drive is not None else None
         bounds = self.bounds((*path, "limits"), limits, kind) if limits is not None else None
         if reflected is None or friction is None or bounds is None:
@@ -320,6 +321,15 @@ class _Reader:
         if slides:
             return (reflected, friction.viscous_n_s_m, friction.coulomb_n, friction.smoothing_m_s, *bounds)
         return (reflected, friction.viscous_nm_s_rad, friction.coulomb_nm, friction.smoothing_rad_s, *bounds)
+
+    def endless(self, path: KeyPath, raw: object) -> object:
+        """The limits of a continuous joint without position limits, which are refused."""
+        if not isinstance(raw, dict):
+            return raw
+        for key in raw:
+            if key.startswith("position_"):
+                self.add((*path, key), "absent for a continuous joint", value_text(raw[key]), "With an end it is revolute.")
+        return {key: value for key, value in raw.items() if not key.startswith("position_")}
 
     def reflected(self, path: KeyPath, drive: Any, slides: bool) -> float | None:
         """Rotor inertia at the joint: given, or rotor inertia times the square of the ratio."""
@@ -452,9 +462,9 @@ def check_arm(document: Document, simulation_only: bool = False) -> ArmFile:
     tables = reader.tables("joint", raw["joint"]) if "joint" in raw else []
     joints = [reader.joint(j, table) for j, table in enumerate(tables)]
     order, bodies = _tree(reader, tables)
-    moving = [j for j in order if tables[j].get("kind") != "fixed"]
-    if "joint" in raw and not 1 <= len(moving) <= MAX_JOINTS and not reader.findings:
-        reader.add(("joint",), f"1 to {MAX_JOINTS} moving joints", f"{len(moving)}")
+    moving = sum(isinstance(table, dict) and table.get("kind") != "fixed" for table in tables)
+    if "joint" in raw and not 1 <= moving <= MAX_JOINTS:
+        reader.add(("joint",), f"1 to {MAX_JOINTS} moving joints", f"{moving}")
     _check_masses(reader, tables, bodies)
     frames = _frames(reader, raw.get("frame"), [str(table.get("name")) for table in tables if isinstance(table, dict)])
     payload = reader.payload(raw.get("payload"), frames, bodies)
@@ -462,7 +472,7 @@ def check_arm(document: Document, simulation_only: bool = False) -> ArmFile:
     damping: tuple[float, ...] = ()
     if rest is not None:
         values, faults = joint_values(
-            document.where("rest", "damping_nm_s_rad"), rest.damping_nm_s_rad, len(moving), "N m s/rad", least=0.0
+            document.where("rest", "damping_nm_s_rad"), rest.damping_nm_s_rad, moving, "N m s/rad", least=0.0
         )
         reader.findings += faults
         damping = tuple(float(value) for value in values)

@@ -158,6 +158,8 @@ def value_text(value: object) -> str:
 def likely_cause(key: str, value: object) -> str:
     """Why a value of the wrong kind or size probably came, empty when nothing is likely."""
     unit = unit_of(key)
+    if key == "gravity_m_s2" and isinstance(value, (int, float)):
+        return "It is a vector in base coordinates: [0.0, 0.0, -9.80665] when z points up."
     if isinstance(value, str) and unit:
         number = re.match(r"\s*[-+]?[0-9.]+(?:[eE][-+]?[0-9]+)?\s*(.*)$", value)
         if number and number[1]:

@@ -255,7 +255,7 @@ def limits_block(arm: "Arm", document: Document, run: Document | None, findings:
 
 def _tighten(limits: _Limits, document: Document, raw: dict[str, Any], run: Document) -> None:
     """Take a run file's table [limits], each value on the tight side of the limits file's."""
-    table = read_block(RunLimits, run, ("limits",), run.data["limits"], limits.findings)
+    read_block(RunLimits, run, ("limits",), run.data["limits"], limits.findings)
     if not isinstance(run.data["limits"], dict):
         return
     block, n = limits.block, limits.arm.n
@@ -267,23 +267,23 @@ def _tighten(limits: _Limits, document: Document, raw: dict[str, Any], run: Docu
                 limits.places[key] = run.where("limits", key)
                 limits.compare(key, values, block[field][:n].copy(), tighter, origin)
                 block[field][:n] = values
-    if table is None:
-        return
+    bad = {finding.where for finding in limits.findings}
+    given = {key: value for key, value in run.data["limits"].items() if run.where("limits", key) not in bad}
     for key, field, tighter in (*_TIMES, *_NUMBERS):
-        value, bound = getattr(table, key), raw.get(key)
-        if value is None or number_fault(bound):
+        value, bound = given.get(key), raw.get(key)
+        if number_fault(value) or number_fault(bound):
             continue
         unit = unit_of(key)
-        if not _tight(value, float(bound or 0), tighter):
+        if not _tight(float(value or 0), float(bound or 0), tighter):
             text = f"{bound:g}" if unit.startswith("(") else f"{bound:g} {unit}"
             limits.findings.append(Finding(run.where("limits", key), f"{tighter} {text} {origin}", f"{value:g}"))
-        block[field] = round(value * 1e9) if unit == "s" else value
+        number = float(value or 0)
+        block[field] = round(number * 1e9) if unit == "s" else number
     for key in _WORDS:
-        value = getattr(table, key)
-        if value is not None and value != raw.get(key):
+        if key in given and given[key] != raw.get(key):
             expected = f"{value_text(raw.get(key))} {origin}"
-            limits.findings.append(Finding(run.where("limits", key), expected, value_text(value)))
-    if getattr(table, "gravity_added_allowed", None) is not None:
-        if table.gravity_added_allowed and not raw.get("gravity_added_allowed"):  # type: ignore[attr-defined]  # fields made at run time
+            limits.findings.append(Finding(run.where("limits", key), expected, value_text(given[key])))
+    if "gravity_added_allowed" in given:
+        if given["gravity_added_allowed"] and not raw.get("gravity_added_allowed"):
             limits.findings.append(Finding(run.where("limits", "gravity_added_allowed"), f"false {origin}", "true"))
-        block["allow_gravity_added"] = table.gravity_added_allowed  # type: ignore[attr-defined]  # the same
+        block["allow_gravity_added"] = given["gravity_added_allowed"]

@@ -37,11 +37,11 @@ from rtctl.config.block_check import (
     value_text,
 )
 from rtctl.config.joint_values import joint_values, number_fault
-from rtctl.config.limits_file import limits_block
+from rtctl.config.limits_file import LimitsKeys, limits_block
 from rtctl.config.names import name_findings
 from rtctl.config.runtime import socket_endpoint
 from rtctl.config.toml_file import Document, KeyPath, read_toml
-from rtctl.config.units import UNITS, suffix_of, unit_of
+from rtctl.config.units import suffix_of, unit_of
 from rtctl.errors import ConfigError, Finding, RtctlError
 
 PERIODS_MAX = 63  # of transport delay in the simulated arm
@@ -314,9 +314,7 @@ class _Reader:
             for key, value in table.items():
                 place: KeyPath = ("gains", law, key)
                 if suffix_of(key) is None:
-                    self.add(
-                        place, f"a key that ends in its unit, e.g. _{next(iter(UNITS))[1:]} or _nm_rad", "a key without unit"
-                    )
+                    self.add(place, "a key that ends in its unit, e.g. kp_nm_rad", "a key without unit")
                 elif isinstance(value, list):
                     for i, entry in enumerate(value):
                         if number_fault(entry):
@@ -421,19 +419,25 @@ class _Reader:
         payload: Payload | None = self.block(Payload, ("sim", "payload"))
         if keys is None:
             return None
-        if keys.payload_dropped and payload is not None:
+        given = isinstance(self.document.data["sim"], dict) and "payload" in self.document.data["sim"]
+        if keys.payload_dropped and given:
             self.add(("sim", "payload_dropped"), "false beside [sim.payload]", "true")
 
         def change(data: dict[str, Any]) -> dict[str, Any]:
             others = {key: value for key, value in data.items() if key != "payload"}
-            if payload is not None:
-                return {**others, "payload": self.document.data["sim"]["payload"]}
-            return others if keys.payload_dropped else data
+            if payload is None:
+                return others if keys.payload_dropped else data
+            frames = [str(frame.get("name")) for frame in data.get("frame", []) if isinstance(frame, dict)]
+            if payload.frame not in frames:
+                expected = f"a frame of {keys.arm_file} ({', '.join(frames) or 'it has none'})"
+                self.add(("sim", "payload", "frame"), expected, value_text(payload.frame))
+                return others
+            return {**others, "payload": self.document.data["sim"]["payload"]}
 
         true = self.arm(("sim", "arm_file"), change, simulation_only=True)
-        if arm is None or true is None:
+        if true is None:
             return None
-        if true.key != arm.key:
+        if arm is not None and true.key != arm.key:
             own = f"{arm.name}: {', '.join(arm.joint_names)}"
             self.add(
                 ("sim", "arm_file"),
@@ -495,15 +499,14 @@ class _Reader:
             if abs(periods - round(periods)) > 1e-6 or round(periods) > PERIODS_MAX:
                 expected = f"a whole number of periods of {period_s:g} s, at most {PERIODS_MAX}"
                 self.add(("sim", key), expected, f"{getattr(keys, key):g}")
-        for i in range(arm.n):
-            noise = quantum[i] / period_s
-            for name, speed in (("still_speed_rad_s", still[i]), ("the limits' still_speed_rad_s", float(still_qd[i]))):
-                if np.isfinite(noise) and np.isfinite(speed) and not speed > noise:
-                    likely = "One count per period already looks like motion."
-                    expected = (
-                        f"fine enough that a count per period ({noise:.3g} {arm.units[i]}/s) stays below {name} ({speed:g})"
-                    )
-                    self.add(("sim", "encoder_bits"), expected, f"too coarse for {arm.joint_names[i]}", likely)
+        for name, speeds in (("still_speed_rad_s", still), ("the still_speed_rad_s of the limits", still_qd)):
+            coarse = [i for i in range(arm.n) if quantum[i] / period_s >= speeds[i]]
+            if coarse:
+                i = coarse[0]
+                expected = f"enough that one count per period stays below {name} ({speeds[i]:g} {arm.units[i]}/s)"
+                names = ", ".join(arm.joint_names[k] for k in coarse)
+                likely = "One count would already look like motion."
+                self.add(("sim", "encoder_bits"), expected, f"{quantum[i] / period_s:.3g} {arm.units[i]}/s ({names})", likely)
 
 
 def load_run(path: Path | str) -> RunConfig:
@@ -551,7 +554,10 @@ def load_run(path: Path | str) -> RunConfig:
 def _limits(reader: _Reader, arm: Arm | None, period_s: float | None) -> np.void | None:
     """The LIMITS block, when arm and limits file can be read; times that fit the period."""
     document = reader.other(("limits_file",))
-    if document is None or arm is None:
+    if document is None:
+        return None
+    if arm is None:  # what can be said without the arm
+        read_block(LimitsKeys, document, (), document.data, reader.findings)
         return None
     count = len(reader.findings)
     block = limits_block(arm, document, reader.document, reader.findings)

@@ -22,6 +22,8 @@ UNITS = {  # suffix of a key -> unit as messages say it; _ns is always nanosecon
     "_nm_rad": "N m/rad",
     "_nm_s_rad": "N m s/rad",
     "_nm_rad_s": "N m/(rad s)",
+    "_nm2_s": "N^2 m^2 s",
+    "_j": "J",
     "_1_s": "1/s",
     "_1_s2": "1/s^2",
     "_1_s3": "1/s^3",
