@@ -39,11 +39,10 @@ class Assembly:
         """Names of the torque terms of each law, in their order."""
         return {law.name: list(law.terms) for law in self.laws}
 
-    def check_start(self, q_start: np.ndarray) -> None:
-        """Raise ConfigError when the motion from this pose leaves the limits."""
+    def start_faults(self, q_start: np.ndarray) -> list[Finding]:
+        """What is wrong with the motion from this pose: where it leaves the limits, or begins too far from the arm."""
         findings = check_reference(self.reference, self.run.arm, self.run.limits, q_start)
-        if findings:
-            raise ConfigError.from_findings([replace(finding, where=f"{self.run.path}: {finding.where}") for finding in findings])
+        return [replace(finding, where=f"{self.run.path}: {finding.where}") for finding in findings]
 
 
 def assemble(run: RunConfig, law: str | None = None, others: Sequence[str] = (), session: int | None = None) -> Assembly:

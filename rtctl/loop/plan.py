@@ -42,6 +42,8 @@ class LoopPlan:
     ring: Ring | None = None
     start_recorder: Callable[[], Any] | None = None  # called once, after the compile; what it returns is kept
     curve: CurveKeys | None = None
+    # What is wrong with the motion from a measured pose (n,), asked before every start; None = nothing is asked.
+    check_start: Callable[[np.ndarray], list[Finding]] | None = None
     folder: Path | None = None  # of flag file and control socket; None = the runtime folder
     keep_alive: tuple[Any, ...] = field(default=(), repr=False)
 
