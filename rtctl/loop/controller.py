@@ -209,16 +209,17 @@ class Controller:
     # ---- threads ---------------------------------------------------------------------------------------------------------------
 
     def _hot_main(self, core: int | None, priority: int | None) -> None:
-        """The hot thread: prepares itself, warms up, waits for the word, runs the loop."""
+        """The hot thread: warms up, prepares itself, waits for the word, runs the loop."""
         assert self._link is not None
         ran = False
         try:
+            # At ordinary priority: a warm-up takes a tenth of a second and would stall another arm's loop on the same core.
+            warm_up(self.plan, self._link.context)
             self.permissions += prepare_hot_thread(core, priority)
             if self.plan.realtime:
                 self._machine.hold_latency()
                 self._machine.lock_memory()
                 self.permissions += self._machine.findings
-            warm_up(self.plan, self._link.context)
             self._warm.set()
             self._go.wait()
             if self._word("leave") == 0:
