@@ -37,7 +37,7 @@ B = TypeVar("B", bound=Block)
 def read_block(model: type[B], document: Document, path: KeyPath, raw: object, findings: list[Finding]) -> B | None:
     """The table at `path` as a frozen object, or None with its problems added to `findings`."""
     if not isinstance(raw, dict):
-        findings.append(Finding(document.where(*path), f"a table ({_some_keys(model)})", value_text(raw)))
+        findings.append(Finding(document.where(*path), f"a table{_needed_keys(model)}", value_text(raw)))
         return None
     try:
         return model.model_validate(raw)
@@ -76,8 +76,9 @@ def unknown_key(where: str, key: str, known: list[str]) -> Finding:
     return Finding(where, f"one of the keys {', '.join(known)}" if known else "absent", "an unknown one")
 
 
-def _some_keys(model: type[Block]) -> str:
-    return "keys: " + ", ".join(name for name, info in model.model_fields.items() if info.is_required())
+def _needed_keys(model: type[Block]) -> str:
+    names = [name for name, info in model.model_fields.items() if info.is_required()]
+    return f" (keys: {', '.join(names)})" if names else ""
 
 
 def field_text(key: str, info: FieldInfo) -> str:
