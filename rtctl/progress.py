@@ -46,6 +46,13 @@ class Progress:
             about = f" (about {expected_s:.0f} s)" if expected_s else ""
             print(f"{text}{about} ...", file=self.stream, flush=True)
 
+    def say(self, text: str) -> None:
+        """What a job reports: a stage; what the computer does not permit is a warning that stays."""
+        if text.startswith("not permitted"):
+            self.note(f"warning: {text}")
+        else:
+            self.stage(text)
+
     def note(self, text: str) -> None:
         """One line that stays, such as a warning."""
         if self._live is not None:

@@ -33,11 +33,13 @@ def ask(request: str, law_name: str | None, controller: str | None, release: boo
     from rtctl.loop.control import ask as ask_controller
 
     if (request == "law") != (law_name is not None):
-        raise click.UsageError("law needs the name of a law: rtctl ask law NAME." if request == "law" else f"{request} takes no name.")
+        raise click.UsageError(
+            "law needs the name of a law: rtctl ask law NAME." if request == "law" else f"{request} takes no name."
+        )
     if release and request != "stop":
         raise click.UsageError("--release goes with stop only.")
     verb = "stop_release" if release else request
-    reply = ask_controller(controller, verb, **({"law": law_name} if law_name else {}))
+    reply = ask_controller(controller, verb, law=law_name) if law_name else ask_controller(controller, verb)
     data = {"verdict": "pass" if reply["ok"] else "refuse", **reply}
     if not reply["ok"]:
         return Result(data, f"{request}: not done. {reply.get('text', '')}".strip(), NEGATIVE)

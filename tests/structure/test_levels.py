@@ -31,6 +31,7 @@ LEVELS = {
     "rtctl.plant": 7,
     "rtctl.loop": 8,
     "rtctl.assembly": 6.5,
+    "rtctl.sim_process": 8.5,
     "rtctl.vet": 9,
     "rtctl.compare": 9,
     "rtctl.report": 9.2,  # shows what compare counts
