@@ -171,7 +171,7 @@ def events(record: Record) -> tuple[Event, ...]:
             why = _name(header["causes"], cause[row])
             add(int(row), "stop", f"{why} ({_name(header['stops'], stop[row])})")
         elif stop[row] != STOP_NONE and (before < 0 or stop[row] > stop[before]):
-            add(int(row), "stop", f"stricter: {_name(header['stops'], stop[row])}")
+            add(int(row), "stop", f"stop: {_name(header['stops'], stop[row])}")
         if before < 0 or mode[row] != mode[before]:
             came = "begins " if before < 0 else f"{_name(header['modes'], mode[before])} to "
             add(int(row), "mode", came + _name(header["modes"], mode[row]))

@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from rtctl.compare import Metrics, counted_rows, events, motion_seconds, row_seconds
+from rtctl.compare import Event, Metrics, counted_rows, events, motion_seconds, row_seconds
 from rtctl.record.reader import Record
 from rtctl.report.series import curve, extremes, pack, pack_margins, shared_grid
 
@@ -35,7 +35,7 @@ def figure_data(records: Sequence[Record], metrics: Sequence[Metrics]) -> dict[s
                 "label": found.label,
                 "colour": RECORD_COLOURS[k % len(RECORD_COLOURS)],
                 "terms": _terms(record),
-                "stops": [[event.t_s, event.text] for event in events(record) if event.what == "stop"],
+                "stops": [[event.t_s, _mark(event)] for event in events(record) if event.what == "stop"],
                 "position": [pack(curve(t_s, record.columns["q"][:, j], grid)) for j in range(_joint_count(record))],
                 "reference": _reference(record, t_s, grid) if k == 0 or not same_reference else None,
                 "error": [pack(curve(t_s, error[:, j], grid)) for j in range(_joint_count(record))],
@@ -50,6 +50,11 @@ def figure_data(records: Sequence[Record], metrics: Sequence[Metrics]) -> dict[s
         ],
         "termColours": TERM_COLOURS,
     }
+
+
+def _mark(event: Event) -> str:
+    """What stands beside the line of a stop: faults are named, commanded stops would only cover the curves."""
+    return "" if event.text.endswith("commanded") else event.text
 
 
 def _joint_count(record: Record) -> int:

@@ -162,7 +162,7 @@
   // ---- the figures --------------------------------------------------------------------------------------------------------------
 
   const line = (label, colour, width, dash) => ({ label: label, stroke: colour, width: width, dash: dash, value: (u, v) => digits(v) });
-  const allStops = data.records.flatMap((r) => r.stops.map(([time, text]) => [time, data.records.length > 1 ? r.label + ": " + text : text]));
+  const allStops = data.records.flatMap((r) => r.stops.map(([time, text]) => [time, text && data.records.length > 1 ? r.label + ": " + text : text]));
   const shown = (j) => data.records.map((r, k) => [r, k]).filter(([r]) => r.error[j]);
 
   function tracking(parent, j) {
