@@ -46,9 +46,9 @@ def sim(run_file: Path, seconds: float) -> Result:
         child.send_signal(signal.SIGTERM)
 
     handlers = {number: signal.signal(number, end) for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)}
+    assert child.stdout is not None and child.stderr is not None
+    summary: dict[str, Any] = {}
     try:
-        assert child.stdout is not None and child.stderr is not None
-        summary: dict[str, Any] = {}
         for line in child.stdout:
             summary = json.loads(line)
             if summary.get("ready"):
@@ -58,6 +58,8 @@ def sim(run_file: Path, seconds: float) -> Result:
     finally:
         for number, handler in handlers.items():
             signal.signal(number, handler)
+        child.stdout.close()
+        child.stderr.close()
     if code == ConfigError.exit_code:
         raise ConfigError(words)
     if code == SetupError.exit_code:

@@ -2,7 +2,9 @@
 
 import re
 import shlex
+import shutil
 import tomllib
+from pathlib import Path
 
 import click
 import pytest
@@ -85,3 +87,19 @@ def test_readme_python_runs() -> None:
     assert blocks("python")
     for block in blocks("python"):
         exec(compile(block, "README.md", "exec"), {"__name__": "readme"})
+
+
+def test_readme_run_file_is_a_run_file(tmp_path: Path) -> None:
+    """The run file shown in the README loads as it stands, beside the shipped arms and limits, and its laws take their gains."""
+    from rtctl.config.run_file import load_run
+    from rtctl.laws import load_law
+
+    (tmp_path / "runs").mkdir()
+    for folder in ("arms", "limits"):
+        shutil.copytree(TOP / "configs" / folder, tmp_path / folder)
+    (text,) = [block for block in blocks("toml") if "rate_hz" in block]
+    place = tmp_path / "runs/shown.toml"
+    place.write_text(text)
+    run = load_run(place)
+    for law, gains in run.gains.items():
+        load_law(law).prepare(run.arm, gains)
