@@ -26,7 +26,7 @@ import zmq
 
 # ---- your arm: the same names, order and units as in its arm file; numbers from the data sheets --------------------------------
 
-ARM_NAME = "one-joint rig"
+ARM_NAME = "toy"
 JOINTS = (("joint1", "rad"),)  # "rad" or "m"
 TAU_MAX = (20.0,)  # N m (N), the driver's own limit: torque beyond it is refused
 QD_MAX = (6.0,)  # rad/s (m/s), the driver's own limit: beyond it the grant ends
@@ -41,16 +41,23 @@ STILL_DWELL_NS = 50_000_000
 PERIOD_NS = 1_000_000
 SIMULATED = True  # False on hardware: `--demo` is then refused
 
+START_NS = time.monotonic_ns()
+
+
+def clock_ns() -> int:
+    """The driver's monotonic clock, counted from its start: counters end at 2^53 ns, 104 days, and computers run for longer."""
+    return time.monotonic_ns() - START_NS
+
 
 class Bus:
     """The three places to fill in. Positive torque accelerates positive motion; all values are on the link side of the gear."""
 
     def __init__(self) -> None:
-        self.q, self.qd, self.tau, self.braked, self.last_ns = 0.0, 0.0, 0.0, True, time.monotonic_ns()
+        self.q, self.qd, self.tau, self.braked, self.last_ns = 0.0, 0.0, 0.0, True, clock_ns()
 
     def read_joints(self) -> tuple[list[float], list[float], list[float], int]:
         """FILL IN 1: q, qd, measured torque (or an empty list) and the drives' status bits ENABLED, FAULT, STOP_CHAIN_CLOSED."""
-        now_ns = time.monotonic_ns()
+        now_ns = clock_ns()
         dt_s, self.last_ns = 1e-9 * (now_ns - self.last_ns), now_ns
         self.qd = 0.0 if self.braked else self.qd + dt_s * self.tau / 0.5  # a toy: 0.5 kg m^2 and nothing else
         self.q += dt_s * self.qd
@@ -251,35 +258,35 @@ def drain(torques: zmq.Socket[Any], duty: Duty) -> None:
         parts = torques.recv_multipart()
         messages.append(parts[0] if len(parts) == 1 else b"")
     for message in messages:
-        duty.receive(message, time.monotonic_ns(), only_release=len(messages) == DRAIN_MAX)
+        duty.receive(message, clock_ns(), only_release=len(messages) == DRAIN_MAX)
 
 
 def main() -> int:
     """Run the bus cycle until a signal or `--seconds`; then let the rest policy bring the arm to rest, and end."""
     runtime = os.environ.get("XDG_RUNTIME_DIR")
-    folder = f"{runtime}/rtctl" if runtime else f"/tmp/rtctl-{os.getuid()}"
+    folder = f"{runtime}/rtctl" if runtime else f"{os.environ.get('TMPDIR') or '/tmp'}/rtctl-{os.getuid()}"
     options = argparse.ArgumentParser(description="Driver template: a toy joint that obeys torque messages.")
     options.add_argument("--demo", action="store_true", help="run the toy joint")
-    options.add_argument("--state", default=f"ipc://{folder}/template.state", help="endpoint of the state messages")
-    options.add_argument("--torque", default=f"ipc://{folder}/template.torque", help="endpoint of the torque messages")
+    options.add_argument("--state", default=f"ipc://{folder}/toy-state", help="endpoint of the state messages")
+    options.add_argument("--torque", default=f"ipc://{folder}/toy-torque", help="endpoint of the torque messages")
     options.add_argument("--seconds", type=float, default=math.inf)
     chosen = options.parse_args()
     if chosen.demo != SIMULATED:
         options.error("--demo must be given as long as SIMULATED is True, and only then")
 
     ended: list[int] = []
-    for number in (signal.SIGINT, signal.SIGTERM):
+    for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP):
         signal.signal(number, lambda number, frame: ended.append(number))
     context: zmq.Context[Any] = zmq.Context()
     states = bind(context, zmq.PUB, chosen.state)
     torques = bind(context, zmq.PULL, chosen.torque)
-    begin_ns = deadline_ns = time.monotonic_ns()
+    begin_ns = deadline_ns = clock_ns()
     bus, duty = Bus(), Duty(1 + secrets.randbelow(2**53 - 1), begin_ns)
     print(f"arm key {duty.key}, states on {chosen.state}, torques on {chosen.torque}", flush=True)
     try:
         while not (ended and duty.phase == "still"):
             drain(torques, duty)
-            sample_ns = time.monotonic_ns()
+            sample_ns = clock_ns()
             q, qd, tau, status = bus.read_joints()
             if ended or sample_ns - begin_ns > 1e9 * chosen.seconds:
                 ended.append(0)
@@ -288,8 +295,8 @@ def main() -> int:
             bus.write_torques(command)
             bus.set_brake(braked)
             states.send(duty.state(q, qd, tau, sample_ns), zmq.NOBLOCK)
-            deadline_ns += PERIOD_NS * max(1, math.ceil((time.monotonic_ns() - deadline_ns) / PERIOD_NS))  # late: skip, no burst
-            time.sleep(max(0, deadline_ns - time.monotonic_ns()) * 1e-9)
+            deadline_ns += PERIOD_NS * max(1, math.ceil((clock_ns() - deadline_ns) / PERIOD_NS))  # late: skip, no burst
+            time.sleep(max(0, deadline_ns - clock_ns()) * 1e-9)
     finally:  # whatever fails above: brakes first, then no torque
         bus.set_brake(HAS_BRAKE)
         bus.write_torques([0.0] * N)
