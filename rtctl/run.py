@@ -120,7 +120,7 @@ def run_live(
         finally:
             if controller.recorder is None:  # nobody else will take the ring away
                 ring.remove()
-        _await_recorder(controller.recorder, record_path, progress)
+            _await_recorder(controller.recorder, record_path, progress)
         return outcome
 
 

@@ -1,4 +1,4 @@
-"""An arm made by hand for tests of laws and references: the fields of `rtctl.arm.Arm` they read, around any model. Invented values."""
+"""An arm made by hand for tests of laws and references: the fields of `rtctl.arm.Arm` they read. Invented values."""
 
 from types import SimpleNamespace
 from typing import Any

@@ -289,7 +289,7 @@ def test_the_usual_day() -> None:
         mode, stop = taken.next_mode, taken.next_stop
 
 
-# ---- mutation: each guard flipped once; a mutant that no sentence catches is a hole in the sentences ------------------------------
+# ---- mutation: each guard flipped once; a mutant that no sentence catches is a hole in the sentences ----
 
 FLIPS = {ast.Eq: ast.NotEq, ast.NotEq: ast.Eq, ast.Gt: ast.GtE, ast.GtE: ast.Gt, ast.Lt: ast.LtE, ast.LtE: ast.Lt}
 
