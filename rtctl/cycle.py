@@ -108,10 +108,11 @@ def _call_law(setup, pointers, memory, used, row):  # type: ignore[no-untyped-de
             sample["q_ref"][i] = NAN
             sample["qd_ref"][i] = NAN
             sample["qdd_ref"][i] = NAN
-        supervisor["reference_status"] = call_address(
-            pointers["reference_sample"],
-            (address_of(setup["reference"]), address_of(memory["reference"]), address_of(sample)),
-        )
+        if supervisor["reference_status"] == OK:  # a `begin` that failed is not forgotten: its motion does not exist
+            supervisor["reference_status"] = call_address(
+                pointers["reference_sample"],
+                (address_of(setup["reference"]), address_of(memory["reference"]), address_of(sample)),
+            )
         supervisor["reference_done"] = 1 if sample["t_s"] >= memory["reference"]["end_s"] else 0
         x["n"] = n
         x["dt_s"] = float(setup["period_ns"]) * 1e-9
@@ -124,23 +125,28 @@ def _call_law(setup, pointers, memory, used, row):  # type: ignore[no-untyped-de
             x["qdd_ref"][i] = sample["qdd_ref"][i]
             x["tau_law_last"][i] = supervisor["tau_law"][i]
             x["tau_out_last"][i] = supervisor["tau_out"][i]
+        count = pointers["law_term_count"]
         for k in range(MAX_TERMS):
             for i in range(n):
-                row["terms"][k, i] = NAN if k < pointers["law_term_count"] else 0.0
-        supervisor["law_status"] = call_address(
-            pointers["law"],
-            (
-                address_of(setup["model"]),
-                address_of(x),
-                address_of(pointers["law_parameters"]),
-                address_of(memory["law"]),
-                address_of(memory["scratch"]),
-                row["terms"][:].ctypes.data,
-            ),
-        )
+                row["terms"][k, i] = NAN if k < count else 0.0
+        supervisor["law_status"] = 0
+        if 1 <= count <= MAX_TERMS:
+            supervisor["law_status"] = call_address(
+                pointers["law"],
+                (
+                    address_of(setup["model"]),
+                    address_of(x),
+                    address_of(pointers["law_parameters"]),
+                    address_of(memory["law"]),
+                    address_of(memory["scratch"]),
+                    row["terms"][:].ctypes.data,
+                ),
+            )
+        else:
+            count = 0
         for i in range(n):
             tau = 0.0
-            for k in range(pointers["law_term_count"]):
+            for k in range(count):
                 tau += row["terms"][k, i]
             supervisor["tau_law"][i] = tau
     elif not live:

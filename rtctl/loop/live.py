@@ -66,6 +66,7 @@ _POINTERS_BYTES = POINTERS.itemsize
 _ROW_BYTES = ROW.itemsize
 _ROW_WORDS = _ROW_BYTES // 8
 _STATE_WORDS = STATE.itemsize // 8
+CATCH_UP = 16  # states may come early by one part in so many of the period, on average: a late one is made up for
 MAX_WAKES = 4 * MAX_DRAIN  # of one wait for a state: a descriptor may also wake up for other reasons
 assert ROW.itemsize % 8 == 0 and STATE.itemsize % 8 == 0
 
@@ -165,8 +166,8 @@ def _wait_for_timer(loop, setup, inp):  # type: ignore[no-untyped-def]
 def _wait_for_state(loop, setup, inp):  # type: ignore[no-untyped-def]
     """Wait for a new state; one silent period starts a cycle without one.
 
-    A cycle starts no earlier than half a period after the one before, so that repeated messages cannot drive the loop; the period
-    of silence counts from there. A state is therefore waited for up to one and a half periods, and its jitter does no harm.
+    A cycle starts no earlier than half a period after the one before counts as started (`paced_start`), so that messages that come
+    too often cannot drive the loop; the period of silence counts from there, and jitter of the states does no harm.
     """
     period_ns = setup["period_ns"]
     last_ns = loop["last_start_ns"]
@@ -198,11 +199,23 @@ def _wait_for_state(loop, setup, inp):  # type: ignore[no-untyped-def]
     inp["skipped"] = skipped
     if inp["state_new"] == 1:
         inp["deadline_ns"] = woke_ns
-        loop["last_start_ns"] = woke_ns
+        loop["last_start_ns"] = paced_start(last_ns, woke_ns, period_ns)
     else:
         inp["deadline_ns"] = limit_ns + skipped * period_ns
         loop["last_start_ns"] = inp["deadline_ns"] - period_ns // 2
     return OK
+
+
+@hot
+def paced_start(last_ns, woke_ns, period_ns):  # type: ignore[no-untyped-def]
+    """When a cycle that a state started at `woke_ns` counts as started, in ns; `last_ns` is that of the cycle before.
+
+    Every cycle counts a whole period of time, for the reference, the dwells and the torque's rate. So that a driver with a shorter
+    period than the run file's cannot make them run fast, starts are on average no closer than a period less one part in
+    CATCH_UP.
+    """
+    earliest_ns = last_ns + period_ns - period_ns // CATCH_UP
+    return woke_ns if woke_ns > earliest_ns else earliest_ns
 
 
 @hot

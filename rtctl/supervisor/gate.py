@@ -64,7 +64,7 @@ def pass_gate(setup, mode, tau, gravity, tau_last, row):  # type: ignore[no-unty
 
     for i in range(n):
         bound = limits["tau_max"][i]
-        if not (-bound <= row["tau_out"][i] <= bound):
+        if not (math.isfinite(row["tau_out"][i]) and -bound <= row["tau_out"][i] <= bound):
             for j in range(n):
                 row["tau_out"][j] = 0.0
             return REFUSED

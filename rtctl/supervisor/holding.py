@@ -5,6 +5,9 @@ from rtctl.kernels.compile import hot
 from rtctl.kernels.inverse_dynamics import gravity_torque
 from rtctl.kernels.layout import OK
 
+NAN = float("nan")
+HUGE = 1e300  # N m: beyond every torque limit, and its sum with gravity stays finite
+
 
 @hot
 def rest_torque(setup, memory, mode, gravity, tau):  # type: ignore[no-untyped-def]
@@ -19,10 +22,18 @@ def rest_torque(setup, memory, mode, gravity, tau):  # type: ignore[no-untyped-d
     link = memory["link"]
     supervisor = memory["supervisor"]
     for i in range(setup["model"]["n"]):
-        tau[i] = gravity[i] - limits["brake_damping"][i] * link["qd"][i]
+        damping = limits["brake_damping"][i] * link["qd"][i]
+        # A speed that is absurd but finite must not overflow: the arm is braked with full torque, not dropped by the gate.
+        if damping > HUGE:
+            damping = HUGE
+        if damping < -HUGE:
+            damping = -HUGE
+        tau[i] = gravity[i] - damping
         if mode == MODE_HOLDING:
             spring = limits["hold_stiffness"][i] * (supervisor["q_hold"][i] - link["q"][i])
             bound = limits["hold_torque_max"][i]
+            if not (bound >= 0.0):
+                spring = NAN  # a bound that bounds nothing: the gate refuses it
             if spring > bound:
                 spring = bound
             if spring < -bound:

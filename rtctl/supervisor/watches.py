@@ -4,6 +4,8 @@ Every test is written positively (`not (x <= limit)`), so that a number that is 
 from the limit and 0 at or beyond it. What a condition leads to in which mode is the table in `fold.py`; nothing here decides.
 """
 
+import math
+
 from rtctl.blocks import (
     BIT_ESTOP,
     BIT_STOP,
@@ -94,7 +96,9 @@ def _watch_state(setup, memory, row):  # type: ignore[no-untyped-def]
     seen = link["have_state"] == 1
     bits = _put(row, WATCH_STATE_INVALID, link["identity"] == -1 or (seen and link["finite"] != 1), 1.0)
 
-    too_old = not (seen and link["age_ns"] <= limits["state_age_max_ns"] and link["resend_count"] <= limits["resend_max"])
+    # An age below zero is a clock that ran backwards.
+    young = seen and 0 <= link["age_ns"] <= limits["state_age_max_ns"]
+    too_old = not (young and link["resend_count"] <= limits["resend_max"])
     m = margin(float(link["age_ns"]), float(limits["state_age_max_ns"]))
     m_count = margin(float(link["resend_count"]), float(limits["resend_max"]) + 1.0)
     bits |= _put(row, WATCH_STATE_AGE, too_old, m_count if m_count < m else m)
@@ -103,6 +107,9 @@ def _watch_state(setup, memory, row):  # type: ignore[no-untyped-def]
     worst = 1.0
     if seen and link["before_sample_ns"] != 0:
         dt_ns = link["last_sample_ns"] - link["before_sample_ns"]
+        # The driver's clock must not widen the reach: states further apart than this are too old anyway.
+        if dt_ns > limits["state_age_max_ns"] + setup["period_ns"]:
+            dt_ns = limits["state_age_max_ns"] + setup["period_ns"]
         if dt_ns < setup["period_ns"]:
             dt_ns = setup["period_ns"]
         for i in range(n):
@@ -126,7 +133,9 @@ def _watch_driver(setup, memory, row):  # type: ignore[no-untyped-def]
     flows = torque_flows(supervisor["mode"])
     status = link["status"]
 
-    fault = not (seen and status & STATUS_ENABLED != 0 and status & STATUS_FAULT == 0)
+    # An open stop chain takes the enable away: that is the chain's cause, not the drive's.
+    enabled = status & (STATUS_ENABLED | STATUS_STOP_CHAIN_CLOSED) != STATUS_STOP_CHAIN_CLOSED
+    fault = not (seen and enabled and status & STATUS_FAULT == 0)
     if status & STATUS_GRAVITY_ADDED != 0 and limits["allow_gravity_added"] != 1:
         fault = True
     if flows and status & STATUS_BRAKE != 0:
@@ -195,6 +204,10 @@ def _watch_law(setup, memory, row):  # type: ignore[no-untyped-def]
     n = setup["model"]["n"]
     live = supervisor["mode"] == MODE_LIVE
     failed = live and (supervisor["law_status"] != OK or supervisor["reference_status"] != OK)
+    if live:
+        for i in range(n):  # a torque that is no number is the law's failure: the arm is braked, before the gate would drop it
+            if not (math.isfinite(row["tau_law"][i]) and math.isfinite(row["q_ref"][i])):
+                failed = True
     bits = _put(row, WATCH_LAW_STATUS, failed, 1.0)
     bits |= _put(row, WATCH_GATE, supervisor["gate_refused"] != 0, 1.0)
 
@@ -231,9 +244,10 @@ def _watch_time(setup, memory, inp, row):  # type: ignore[no-untyped-def]
     late_ns = now_ns - inp["deadline_ns"] + inp["skipped"] * setup["period_ns"]
 
     supervisor["late_cycle"] += 1
-    if not (late_ns <= limits["late_ns"]):
+    # Bounded, so that a window of good cycles is enough to forget a bad hour; with no late cycle allowed one takes a window too.
+    if not (late_ns <= limits["late_ns"]) and supervisor["late_count"] < 2 * (limits["late_max"] + 1):
         supervisor["late_count"] += 1
-    if supervisor["late_cycle"] * limits["late_max"] >= limits["late_window"]:
+    if supervisor["late_cycle"] * max(limits["late_max"], 1) >= limits["late_window"]:
         supervisor["late_cycle"] = 0
         if supervisor["late_count"] > 0:
             supervisor["late_count"] -= 1
@@ -246,7 +260,7 @@ def _watch_time(setup, memory, inp, row):  # type: ignore[no-untyped-def]
 
     stepped = not first and not (abs(inp["boot_offset_ns"] - supervisor["boot_offset_ns"]) <= BOOT_STEP_NS)
     supervisor["boot_offset_ns"] = inp["boot_offset_ns"]
-    away = not (late_ns <= limits["valid_for_ns"])
+    away = not (-limits["valid_for_ns"] <= late_ns <= limits["valid_for_ns"])
     bits |= _put(row, WATCH_CLOCK_JUMP, stepped or away, margin(float(late_ns), float(limits["valid_for_ns"])))
 
     if first or inp["side_beat"] != supervisor["side_beat"]:
