@@ -52,7 +52,7 @@ class RunOutcome:
     started: bool  # a motion began
     mode: str  # at the end, before release
     cause: str  # first cause in force at the end
-    ended: str  # why the run ended: "motion", "time", "interrupted", "terminated", "latched", "ended"
+    ended: str  # why the run ended: "motion", "time", "stopped", "latched", "interrupted", "terminated" or "ended" (by itself)
     status: Mapping[str, Any]  # of the controller at the end; empty in lock-step
     permissions: tuple[Finding, ...]  # what the computer did not permit
 
@@ -129,7 +129,6 @@ def _conduct(
 ) -> RunOutcome:
     """From `off` to the end, in the main thread."""
     end_s = None if seconds is None else time.monotonic() + seconds
-    ended, started = "", False
     if start:
         if not controller.simulated:
             raise SetupError(
@@ -138,34 +137,49 @@ def _conduct(
             )
         progress("waiting for ready")
         if controller.wait(READY_WAIT_S, lambda row: int(row["mode"]) == MODE_READY) == "time":
+            _refuse_rate(controller, assembly.run)
             raise SetupError(
                 "start: must be possible, got a controller that is not ready. " + " ".join(why_no_start(controller.row()))
             )
         refusals = controller.start()
         if refusals:
             raise SetupError("start: must be possible, got a refusal. " + " ".join(refusals))
-        started = True
         progress(f"{assembly.law}: moving")
     else:
         progress('ready when all checks hold; motion needs, from another terminal: "rtctl ask start". Ctrl-C ends the run')
-    if not ended:
-        ended = _wait_for_end(controller, end_s, start)
-    row = controller.row()
-    if int(row["mode"]) == MODE_LIVE:
+    ended = _wait_for_end(controller, end_s, start)
+    if int(controller.row()["mode"]) == MODE_LIVE:
         controller.stop()
-        controller.wait_at_rest(STOP_WAIT_S)
-        row = controller.row()
+    controller.wait_at_rest(STOP_WAIT_S)
+    row = controller.row()
+    if ended == "stopped" and int(row["mode"]) == MODE_LATCHED:
+        ended = "latched"
     return RunOutcome(
         record_path=record_path,
         law=assembly.law,
         simulated=controller.simulated,
         lockstep=False,
-        started=started,
+        started=start,
         mode=MODE_NAMES[int(row["mode"])],
         cause=cause(int(row["first_cause"])).name,
         ended=ended,
         status=controller.status(),
         permissions=tuple(controller.permissions),
+    )
+
+
+def _refuse_rate(controller: Controller, run: RunConfig) -> None:
+    """Raise SetupError when late cycles are what keeps the controller from being ready."""
+    if "late_cycles" not in controller.status()["conditions"]:
+        return
+    timing = controller.status()["timing"]
+    late_us = int(run.limits["late_ns"]) / 1000.0
+    cycles, skipped = timing["cycle_count"], timing["skipped_count"]
+    raise SetupError(
+        f"{run.path}: rate_hz must be a rate that this computer can hold, got {run.rate_hz:g} Hz: "
+        f"of {cycles} cycles {skipped} were skipped, wake-ups were late by {timing['late_p50_us']:.0f} us (median) and "
+        f"{timing['late_p99_us']:.0f} us (99 %), late counts from {late_us:.0f} us, "
+        f"and a cycle costs {timing['cost_p99_us']:.0f} us (99 %). Lower rate_hz, end other programs, or permit what was said to be not permitted."
     )
 
 
@@ -177,7 +191,7 @@ def _wait_for_end(controller: Controller, end_s: float | None, start: bool) -> s
     result = controller.wait(left_s, lambda row: controller.motion_done or int(row["mode"]) != MODE_LIVE)
     if result != "met":
         return result
-    return "motion" if controller.motion_done else MODE_NAMES[int(controller.row()["mode"])]
+    return "motion" if controller.motion_done else "stopped"
 
 
 def run_lockstep(

@@ -101,6 +101,21 @@ def test_without_start_nothing_moves(tmp_path: Path) -> None:
 
 
 @pytest.mark.slow
+def test_a_rate_this_computer_cannot_hold_is_refused_before_the_start(tmp_path: Path) -> None:
+    """With a lateness of 2 us counted as late no computer holds 1 kHz here: one message with the numbers, nothing moved."""
+    run = demo()
+    limits = run.limits.copy()
+    limits["late_ns"], limits["late_max"] = 2000, 1
+    with pytest.raises(SetupError) as caught:
+        run_live(replace(run, limits=limits), sim=True, start=True, record_folder=tmp_path)
+    text = str(caught.value)
+    assert text.startswith(f"{run.path}: rate_hz must be a rate that this computer can hold, got 1000 Hz: of ")
+    assert text.endswith("Lower rate_hz, end other programs, or permit what was said to be not permitted.")
+    (path,) = tmp_path.glob("*.rec")
+    assert not read_record(path).columns["tau_out"].any()
+
+
+@pytest.mark.slow
 def test_an_absent_driver_is_a_bounded_wait_and_one_message(tmp_path: Path) -> None:
     """Without a driver the run ends by itself, says what to do, and leaves no ring behind."""
     with pytest.raises(SetupError, match="rtctl sim"):
