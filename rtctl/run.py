@@ -135,16 +135,7 @@ def _conduct(
                 "--start: must be used with a simulated arm, got a driver of a real one. "
                 "Run without --start, look at the arm, then: rtctl ask start"
             )
-        progress("waiting for ready")
-        if controller.wait(READY_WAIT_S, lambda row: int(row["mode"]) == MODE_READY) == "time":
-            _refuse_rate(controller, assembly.run)
-            raise SetupError(
-                "start: must be possible, got a controller that is not ready. " + " ".join(why_no_start(controller.row()))
-            )
-        refusals = controller.start()
-        if refusals:
-            raise SetupError("start: must be possible, got a refusal. " + " ".join(refusals))
-        progress(f"{assembly.law}: moving")
+        start = _start(controller, assembly, progress)
     else:
         progress('ready when all checks hold; motion needs, from another terminal: "rtctl ask start". Ctrl-C ends the run')
     ended = _wait_for_end(controller, end_s, start)
@@ -168,6 +159,24 @@ def _conduct(
     )
 
 
+def _start(controller: Controller, assembly: Assembly, progress: Progress) -> bool:
+    """Wait for `ready` and begin the motion. False when somebody ended the run first; raises SetupError when it cannot begin."""
+    progress("waiting for ready")
+    result = controller.wait(READY_WAIT_S, lambda row: int(row["mode"]) == MODE_READY)
+    if result == "time":
+        _refuse_rate(controller, assembly.run)
+        raise SetupError(
+            "start: must be possible, got a controller that is not ready. " + " ".join(why_no_start(controller.row()))
+        )
+    if result != "met":
+        return False
+    refusals = controller.start()
+    if refusals:
+        raise SetupError("start: must be possible, got a refusal. " + " ".join(refusals))
+    progress(f"{assembly.law}: moving")
+    return True
+
+
 def _refuse_rate(controller: Controller, run: RunConfig) -> None:
     """Raise SetupError when late cycles are what keeps the controller from being ready."""
     if "late_cycles" not in controller.status()["conditions"]:
@@ -179,7 +188,8 @@ def _refuse_rate(controller: Controller, run: RunConfig) -> None:
         f"{run.path}: rate_hz must be a rate that this computer can hold, got {run.rate_hz:g} Hz: "
         f"of {cycles} cycles {skipped} were skipped, wake-ups were late by {timing['late_p50_us']:.0f} us (median) and "
         f"{timing['late_p99_us']:.0f} us (99 %), late counts from {late_us:.0f} us, "
-        f"and a cycle costs {timing['cost_p99_us']:.0f} us (99 %). Lower rate_hz, end other programs, or permit what was said to be not permitted."
+        f"and a cycle costs {timing['cost_p99_us']:.0f} us (99 %). "
+        "Lower rate_hz, end other programs, or permit what was said to be not permitted."
     )
 
 
