@@ -1,8 +1,8 @@
 """The explicit equations of a measured six-joint arm (source arm6_1986): published constants, how they follow from the link data,
 inertia matrix, velocity coefficients and gravity vector. Written from memory of the paper; no recursion, no code of the project.
 
-Two published constants, I1 and I3, do not follow from the link data (1.43 against 1.553 and 1.38 against 1.602 kg m^2), so a test uses
-either the published set or the derived one, never a mixture.
+Two published constants, I1 and I3, do not follow from the link data (1.43 against 1.553 and 1.38 against 1.602 kg m^2), so a test
+uses either the published set or the derived one, never a mixture.
 """
 
 import math
@@ -16,16 +16,25 @@ Constants = dict[str, float]
 
 IM = (1.14, 4.71, 0.827, 0.200, 0.179, 0.193)  # kg m^2, motor and drive at the joint
 
-PUBLISHED: Constants = {
-    **dict(I1=1.43, I2=1.75, I3=1.38, I4=0.690, I5=0.372, I6=0.333, I7=0.298, I8=-0.134, I9=0.0238, I10=-0.0213, I11=-0.0142),
-    **dict(I12=-0.0110, I13=-3.79e-3, I14=1.64e-3, I15=1.25e-3, I16=1.24e-3, I17=6.42e-4, I18=4.31e-4, I19=3.00e-4, I20=-2.02e-4),
-    **dict(I21=-1.00e-4, I22=-5.80e-5, I23=4.00e-5, g1=-37.2, g2=-8.44, g3=1.02, g4=0.249, g5=-0.0282),
-}
-TOLERANCES: Constants = {  # printed beside the constants
-    **dict(I2=0.07, I4=0.020, I5=0.031, I6=0.016, I7=0.029, I8=0.014, I9=0.0120, I10=0.0022, I11=0.0070, I12=0.0011),
-    **dict(I13=0.90e-3, I14=0.07e-3, I15=0.30e-3, I16=0.30e-3, I17=3.00e-4, I18=1.30e-4, I19=14.0e-4, I20=8.00e-4),
-    **dict(I21=6.00e-4, I22=1.50e-5, I23=2.00e-5, g1=0.5, g2=0.20, g3=0.50, g4=0.025, g5=0.0056),
-}
+# By name, as printed: "name value" pairs; the tolerances stand beside the constants in the paper.
+_PUBLISHED = """
+I1 1.43 I2 1.75 I3 1.38 I4 0.690 I5 0.372 I6 0.333 I7 0.298 I8 -0.134 I9 0.0238 I10 -0.0213 I11 -0.0142 I12 -0.0110
+I13 -3.79e-3 I14 1.64e-3 I15 1.25e-3 I16 1.24e-3 I17 6.42e-4 I18 4.31e-4 I19 3.00e-4 I20 -2.02e-4 I21 -1.00e-4 I22 -5.80e-5
+I23 4.00e-5 g1 -37.2 g2 -8.44 g3 1.02 g4 0.249 g5 -0.0282
+"""
+_TOLERANCES = """
+I2 0.07 I4 0.020 I5 0.031 I6 0.016 I7 0.029 I8 0.014 I9 0.0120 I10 0.0022 I11 0.0070 I12 0.0011 I13 0.90e-3 I14 0.07e-3
+I15 0.30e-3 I16 0.30e-3 I17 3.00e-4 I18 1.30e-4 I19 14.0e-4 I20 8.00e-4 I21 6.00e-4 I22 1.50e-5 I23 2.00e-5
+g1 0.5 g2 0.20 g3 0.50 g4 0.025 g5 0.0056
+"""
+
+
+def _pairs(text: str) -> Constants:
+    words = text.split()
+    return {name: float(value) for name, value in zip(words[::2], words[1::2], strict=True)}
+
+
+PUBLISHED, TOLERANCES = _pairs(_PUBLISHED), _pairs(_TOLERANCES)
 
 
 def derived_constants(g: float) -> Constants:
