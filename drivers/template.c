@@ -165,10 +165,10 @@ static Reason read_torque(const uint8_t *data, size_t size, Torque *t) { /* COUN
     uint64_t *fields[] = {&kind, &t->key, &t->session, &t->sequence, &t->driver_session, &t->answered, &t->grant, &t->request,
         &t->valid_ns};
     for (int k = 0; k < 9; k++) *fields[k] = take_counter(&r);
-    uint64_t joints = take_array(&r);
     if (r.bad || count != 12 || kind != 2) return FORM;
-    if (joints != N) return TAU;
+    uint64_t joints = take_array(&r);
     for (int i = 0; i < N; i++) t->tau[i] = take_number(&r);
+    if (r.bad || joints != N) return TAU;
     size_t covered = (size_t)(r.at - data);
     uint64_t crc = take_counter(&r);
     if (r.bad || r.at != r.end) return FORM;
