@@ -34,6 +34,7 @@ SOURCES: dict[str, str] = {
     "routh": "Routh-Hurwitz criterion, any textbook of control, e.g. Craig, Introduction to Robotics.",
     "siciliano2009": "B. Siciliano, L. Sciavicco, L. Villani, G. Oriolo, Robotics, Springer, 2009 (from memory).",
     "astrom-hagglund1995": "K. J. Astrom, T. Hagglund, PID Controllers: Theory, Design, and Tuning, 1995, sec. 3.5 (from memory).",
+    "franklin1998": "G. F. Franklin, J. D. Powell, M. Workman, Digital Control of Dynamic Systems, 3rd ed. 1998 (from memory).",
     "scipy": "SciPy >= 1.15, general-purpose numerical library.",
 }
 
