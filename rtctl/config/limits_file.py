@@ -26,6 +26,7 @@ if TYPE_CHECKING:
 FloatArray = npt.NDArray[np.float64]
 
 LESS, MORE, SAME = "at most", "at least", "equal to"  # how a run file may differ from the limits file
+STILL_RATIO_MAX = 0.1  # of the speed limit: a joint that is faster is not still, and a stop must not end at speed
 TURN_RAD = 2.0 * math.pi
 
 Second = Annotated[float, Gt(0.0), Le(1.0)]
@@ -199,6 +200,18 @@ class _Limits:
                     where = f"{self.places['position_min_rad']}[{i}]"
                     self.findings.append(Finding(where, f"less than position_max_rad ({high:g} {arm.units[i]})", f"{low:g}"))
 
+    def against_each_other(self) -> None:
+        """A stop must be able to stop: it may change the torque as fast as the law, and `still` is not a speed of motion."""
+        n, block = self.arm.n, self.block
+        if {"braking_torque_rate_max_nm_s", "torque_rate_max_nm_s"} <= self.places.keys():
+            rate = block["tau_rate_max"][:n]
+            self.compare(
+                "braking_torque_rate_max_nm_s", block["brake_tau_rate_max"][:n], rate, MORE, "as in torque_rate_max_nm_s"
+            )
+        if {"still_speed_rad_s", "speed_max_rad_s"} <= self.places.keys():
+            most = STILL_RATIO_MAX * block["qd_max"][:n]
+            self.compare("still_speed_rad_s", block["still_qd"][:n], most, LESS, "(a tenth of speed_max_rad_s)")
+
     def compare(self, key: str, values: FloatArray, bounds: FloatArray, tighter: str, origin: str) -> None:
         """Values on the tight side of bounds, joint by joint."""
         for i, (value, bound) in enumerate(zip(values, bounds, strict=True)):
@@ -250,6 +263,7 @@ def limits_block(arm: "Arm", document: Document, run: Document | None, findings:
     limits.against_arm()
     if run is not None and "limits" in run.data:
         _tighten(limits, document, raw, run)
+    limits.against_each_other()
     return block
 
 

@@ -146,7 +146,7 @@ def test_continuous_joint_has_infinite_limits() -> None:
         ]),
         ({"speed_max_rad_s": [1.0, 3.5]}, "lim: speed_max_rad_s[1] (elbow): must be at most 3 rad/s as in arm.toml, got 3.5."),
         (
-            {"braking_torque_rate_max_nm_s": [6001.0, 1.0]},
+            {"braking_torque_rate_max_nm_s": [6001.0, 6000.0]},
             "lim: braking_torque_rate_max_nm_s[0] (shoulder): must be at most 6000 N m/s as in arm.toml, got 6001.",
         ),
         (
@@ -157,6 +157,14 @@ def test_continuous_joint_has_infinite_limits() -> None:
         (
             {"speed_max_rad_s": [1.0]},
             "lim: speed_max_rad_s: must be one number or a list of 2 numbers, one per joint, got a list of 1.",
+        ),
+        (
+            {"braking_torque_rate_max_nm_s": [3000.0, 2999.0]},
+            "lim: braking_torque_rate_max_nm_s[1] (elbow): must be at least 3000 N m/s as in torque_rate_max_nm_s, got 2999.",
+        ),
+        (
+            {"still_speed_rad_s": [0.2, 1e308]},
+            "lim: still_speed_rad_s[1] (elbow): must be at most 0.2 rad/s (a tenth of speed_max_rad_s), got 1e+308.",
         ),
         ({"speed_max_rad_s": 0.0}, "lim: speed_max_rad_s: must be a finite number > 0 rad/s, or a list of 2 of them, got 0.0."),
         ({"torque_max_nm": [-1.0, 1.0]}, [
