@@ -88,6 +88,7 @@ class Judge:
         self.driver = (-1, -1)  # session and sequence of the newest state that counts
         self.state: dict[str, object] = {}  # what it said
         self.grant = 0  # of the motion
+        self.grants: set[tuple[int, int]] = set()  # session of the driver and number, used by a motion
         self.without_state = 0
         self.boot_ns: int | None = None
         self.braking_since_ns = 0
@@ -149,7 +150,10 @@ class Judge:
             asked = requests & BIT_START != 0 and requests & (STOPS | BIT_RESET) == 0
             self._rule(asked, "motion begins only in a cycle with a start and without a stop, an e-stop or a reset")
             self._rule(not tripped, "motion begins only when no condition is present")
-            self.grant = int(self.state["grant"])  # type: ignore[call-overload]  # an integer
+            grant = (self.driver[0], int(self.state["grant"]))  # type: ignore[call-overload]  # an integer
+            self._rule(before == MODE_HOLDING or grant not in self.grants, "a motion from ready needs a grant of its own")
+            self.grants.add(grant)
+            self.grant = grant[1]
         if before == MODE_LATCHED and mode != MODE_LATCHED:
             asked = requests & BIT_RESET != 0 and requests & STOPS == 0
             self._rule(asked, "latched is left only by a reset without a stop")

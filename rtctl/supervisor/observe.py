@@ -71,6 +71,7 @@ def _accept(setup, memory, inp):  # type: ignore[no-untyped-def]
     if fresh_session:
         if link["have_state"] == 1 and torque_flows(memory["supervisor"]["mode"]):
             link["restarted"] = 1
+        memory["supervisor"]["grant"] = 0  # a driver numbers its grants anew in each session
         link["have_state"] = 1
         link["driver_session"] = state["session"]
         link["offset_min_ns"] = offset_ns

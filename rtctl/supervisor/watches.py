@@ -145,7 +145,10 @@ def _watch_driver(setup, memory, row):  # type: ignore[no-untyped-def]
     bits = _put(row, WATCH_DRIVER_FAULT, fault, 1.0)
     bits |= _put(row, WATCH_STOP_CHAIN, not (seen and status & STATUS_STOP_CHAIN_CLOSED != 0), 1.0)
     # A restarted driver has no grant of ours, whatever it says.
-    lost = link["grant"] == 0 or link["restarted"] == 1 or (flows and link["grant"] != supervisor["grant"])
+    lost = link["grant"] == 0 or link["restarted"] == 1
+    # A motion has one grant and a grant one motion: after its release a number is over, although late states still show it.
+    if flows != (link["grant"] == supervisor["grant"]):
+        lost = True
     bits |= _put(row, WATCH_GRANT, lost, 1.0)
 
     delay = link["loop_delay_ns"]

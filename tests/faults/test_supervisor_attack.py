@@ -464,6 +464,35 @@ def test_a_clock_that_runs_backwards_stops_the_arm() -> None:
     assert (stand.mode, stand.cause) == (MODE_LATCHED, "state_age")
 
 
+@pytest.mark.parametrize("late", range(4))
+def test_a_start_right_after_a_release_waits_for_a_new_grant(late: int) -> None:
+    """States still show the grant that was just given back: a motion on it would be refused by the driver and end in latched."""
+    stand = Stand().to_live()
+    stand.step(BIT_STOP_RELEASE)
+    stand.until(MODE_READY)
+    driver, grant = stand.driver, stand.driver.grant
+    for k in range(60):
+        driver.holder = SESSION if k < 3 else driver.holder if k > 3 else 0  # the release is on its way for three cycles
+        stand.step(BIT_START if k == late else 0)
+        assert stand.mode in (MODE_OFF, MODE_READY), stand.says()
+    assert stand.mode == MODE_READY
+    assert driver.grant > grant
+    stand.step(BIT_START)
+    assert stand.mode == MODE_LIVE
+
+
+def test_a_restarted_driver_may_grant_the_number_of_the_last_motion_again() -> None:
+    """Numbers count per driver session: after a restart the same number is a new grant."""
+    stand = Stand().to_live()
+    number = stand.driver.grant
+    stand.driver.session, stand.driver.sequence, stand.driver.holder, stand.driver.grant = 501, 0, 0, number - 1
+    stand.step()
+    assert stand.mode == MODE_LATCHED
+    for _ in range(100):
+        stand.step(BIT_RESET if stand.mode == MODE_LATCHED else 0)
+    assert (stand.mode, stand.driver.grant) == (MODE_READY, number)
+
+
 @pytest.mark.parametrize("late_max", [0, 10])
 def test_late_cycles_are_forgotten_within_two_windows_however_many_they_were(late_max: int) -> None:
     """A bad hour at rest, or a single late cycle where none is allowed, does not keep the arm off for ever."""
