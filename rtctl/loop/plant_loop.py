@@ -33,6 +33,8 @@ LEAVE_MAX_NS = 4_000_000_000  # an arm that does not come to rest by then is lef
 
 STOPPED = 1  # returned by the loop: the stop word was set
 TIME_OVER = 2
+EPOCH_LEAD_NS = 1_000_000_000  # of the driver's clock at its start: 0 means `never` in its memory
+
 PLANT_DIED = 3  # a kernel returned another status than OK
 
 PLANT_LOOP = np.dtype(
@@ -49,6 +51,7 @@ PLANT_LOOP = np.dtype(
         ("state", STATE),
         ("scratch", EXTERNAL_SCRATCH),
         ("torque_fd", "i8"),  # descriptor of the torque socket
+        ("epoch_ns", "i8"),  # monotonic time at which the driver's own clock stood at 0
         ("leave_since_ns", "i8"),  # when it was told to end, 0 = not yet
         ("in_set", "i8"),  # 1: the next message is a later part of a multipart message
         # ---- counts
@@ -82,13 +85,15 @@ def run_plant(setup, memory, loop):  # type: ignore[no-untyped-def]
     period_ns = setup["period_ns"]
     loop["leave_since_ns"] = 0
     loop["torque_fd"] = socket_option(loop["torque_socket"], ZMQ_FD, scratch)
-    begin_ns = now_ns(CLOCK_MONOTONIC, scratch)
+    # The driver's clock counts from its start: the computer's would leave the range of the messages after 104 days without a reboot.
+    loop["epoch_ns"] = now_ns(CLOCK_MONOTONIC, scratch) - EPOCH_LEAD_NS
+    begin_ns = _clock_ns(loop)
     deadline_ns = begin_ns
     published = 0
     if plant_start(setup, memory, begin_ns) != OK:
         return PLANT_DIED
     while True:
-        woke_ns = now_ns(CLOCK_MONOTONIC, scratch)
+        woke_ns = _clock_ns(loop)
         late_ns = woke_ns - deadline_ns
         if late_ns > loop["late_max_ns"]:
             loop["late_max_ns"] = late_ns
@@ -110,6 +115,12 @@ def run_plant(setup, memory, loop):  # type: ignore[no-untyped-def]
 
 
 @hot
+def _clock_ns(loop):  # type: ignore[no-untyped-def]
+    """The driver's own clock."""
+    return now_ns(CLOCK_MONOTONIC, loop["scratch"]) - loop["epoch_ns"]
+
+
+@hot
 def _leave(setup, memory, loop, woke_ns, begin_ns):  # type: ignore[no-untyped-def]
     """True once the driver is to end: the grant is over, no new one is given, and the rest policy brings the arm to rest first."""
     if loop["leave_since_ns"] == 0:
@@ -125,7 +136,7 @@ def _wait(setup, memory, loop, deadline_ns):  # type: ignore[no-untyped-def]
     """Wait for the next period, and wake up for torque messages until then; a flood of them is left for the period's end."""
     scratch = loop["scratch"]
     for _ in range(MAX_WAKES):
-        remaining_ns = deadline_ns - now_ns(CLOCK_MONOTONIC, scratch)
+        remaining_ns = deadline_ns - _clock_ns(loop)
         if remaining_ns <= 0:
             return OK
         # The descriptor signals a change only: what already waits must be asked for first.
@@ -135,12 +146,12 @@ def _wait(setup, memory, loop, deadline_ns):  # type: ignore[no-untyped-def]
                 break
             if ready == 0 or socket_option(loop["torque_socket"], ZMQ_EVENTS, scratch) & ZMQ_POLLIN == 0:
                 continue
-        woke_ns = now_ns(CLOCK_MONOTONIC, scratch)
+        woke_ns = _clock_ns(loop)
         status = plant_advance(setup, memory, woke_ns)
         if status != OK:
             return status
         _take_torques(setup, memory, loop, woke_ns)
-    sleep_until_ns(deadline_ns, scratch)
+    sleep_until_ns(deadline_ns + loop["epoch_ns"], scratch)
     return OK
 
 
