@@ -1,5 +1,6 @@
 """The compiled codec against the msgpack package, published vectors and every legal form; fuzzing is in tests/faults."""
 
+import math
 import struct
 
 import msgpack
@@ -216,6 +217,7 @@ def test_published_vectors_are_read(value, hexes):
         (float("-inf"), "cbfff0000000000000"),
         (float("nan"), "cb7ff8000000000000"),
         (-0.0, "cb8000000000000000"),
+        (math.pi, "cb400921fb54442d18"),
         (2.0, "cb4000000000000000"),
     ],
 )
@@ -226,6 +228,50 @@ def test_floats_are_written_as_float64(value, text):
     message = encoded(torque)
     assert bytes.fromhex("91" + text) in message
     assert decoded(message, TORQUE)[1]["tau"].tobytes() == torque["tau"].tobytes()
+
+
+@source("msgpack-vectors", "string, array and map groups: published bytes of what may stand in the extras")
+@pytest.mark.parametrize(
+    "text",
+    [
+        "80",  # {}
+        "81a16101",  # {"a": 1}
+        "81a001",  # {"": 1}
+        "81a16190",  # {"a": []}
+        "81a1619101",  # {"a": [1]}
+        "81a161dc0010" + "".join(f"{k:02x}" for k in range(1, 17)),  # {"a": [1, 2, ..., 16]}
+        "81d920" + b"12345678901234567890123456789012".hex() + "01",  # a name of 32 bytes
+        "81a161ca3f000000",  # {"a": 0.5}
+    ],
+)
+def test_published_strings_arrays_and_maps_are_read(text):
+    """Published bytes of names, flat arrays and maps pass as extras, and the state before them is unchanged."""
+    status, state = decoded(with_element(example_state(), 16, bytes.fromhex(text)), STATE)
+    assert status == OK
+    assert state.tobytes() == decoded(packed(state_items(example_state())), STATE)[1].tobytes()
+
+
+@source("msgpack-vectors", "nil, bool, binary, string, map and timestamp groups: published bytes that are not numbers")
+@pytest.mark.parametrize(
+    "text",
+    ["c0", "c2", "c3", "c400", "c40200ff", "a0", "a161", "90", "9101", "80", "81a16101", "d7ffa1dcd7c85a4af6a5"],
+)
+def test_published_values_that_are_no_numbers_are_refused(text):
+    """Nil, truth values, bytes, text, arrays, maps and the time stamp of 2018-01-02 are no joint value, counter or extra."""
+    element = bytes.fromhex(text)
+    assert status_of(with_element(example_torque(1), 10, b"\x91" + element), TORQUE) == refusals.NUMBER_FORM
+    assert status_of(with_element(example_torque(1), 2, element), TORQUE) == refusals.COUNTER_FORM
+    if text not in ("90", "9101"):
+        assert status_of(with_element(example_state(), 16, b"\x81\xa1a" + element), STATE) == refusals.EXTRAS
+
+
+@source("msgpack-spec", "the smallest form SHOULD be used: fixarray up to 15 elements, array16 (dc) above; floats take 9 bytes")
+def test_joint_arrays_are_written_in_the_smallest_form():
+    """15 joints begin with 9f, 16 with dc0010; seven float64 take one byte and 63."""
+    for n, header in ((7, "97"), (15, "9f"), (16, "dc0010")):
+        torque = example_torque(n)
+        assert bytes.fromhex(header) + struct.pack(">Bd", 0xCB, torque["tau"][0]) in encoded(torque)
+    assert len(encoded(example_torque(7))) - len(encoded(example_torque(6))) == 9
 
 
 def test_unsigned_values_beyond_int64_are_rounded_to_even():

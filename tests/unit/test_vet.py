@@ -105,6 +105,14 @@ def test_size_of_gravity(gravity: list[float], text: str | None) -> None:
     assert texts(vet(gravity_m_s2=gravity)) == expected
 
 
+@source("wgs84", "normal gravity at 0, 30, 45, 50, 60 and 90 degrees of latitude")
+@pytest.mark.parametrize("g", [9.7803253359, 9.7932472692, 9.8061977694, 9.8107021356, 9.8191769531, 9.8321849378])
+def test_gravity_of_every_latitude_passes(g: float) -> None:
+    """From the equator to the poles no place is warned about, nor a mountain of 5 km (3.086e-6 1/s^2 of height)."""
+    for height_m in (0.0, 5000.0):
+        assert texts(vet(gravity_m_s2=[0.0, 0.0, -(g - 3.086e-6 * height_m)])) == []
+
+
 @source("textbook mechanics", "solid sphere: 2 m r^2 / 5; solid ellipsoid: m (b^2 + c^2) / 5")
 def test_density() -> None:
     """The density of a solid sphere and of a solid ellipsoid is found from mass and inertia."""
