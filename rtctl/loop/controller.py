@@ -113,6 +113,9 @@ class Controller:
         self.driver = wait_for_driver(self._link.state_socket, plan)
         self._fill_loop()
         self._progress("warming up")
+        if plan.check_start is not None:
+            # What a start asks in the side thread must not compile there: the heartbeat would stop.
+            plan.check_start(self.driver["q"][: int(plan.setup["model"]["n"])])
         self._hot = threading.Thread(target=self._hot_main, args=(core, priority), name="rtctl-hot", daemon=True)
         self._hot.start()
         if not self._warm.wait(WARM_UP_MAX_S) or self._error is not None:
