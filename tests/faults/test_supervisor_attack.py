@@ -26,6 +26,7 @@ from rtctl.blocks import (
     MODE_NAMES,
     MODE_OFF,
     MODE_READY,
+    REQUEST_ASK,
     REQUEST_DRIVE,
     REQUEST_RELEASE,
     STATUS_BRAKE,
@@ -35,11 +36,15 @@ from rtctl.blocks import (
     STATUS_STOP_CHAIN_CLOSED,
     STOP_FAULT,
     STOP_NOW,
+    TORQUE,
     WATCH_NAMES,
 )
 from rtctl.kernels.compile import callback
+from rtctl.kernels.layout import OK, new_block
 from rtctl.loop.live import CATCH_UP, paced_start
 from rtctl.loop.lockstep import LOST_STATE, LOST_TORQUE
+from rtctl.plant.blocks import HISTORY, PHASE_STILL
+from rtctl.plant.driver_duty import plant_advance, plant_receive
 from rtctl.supervisor.fold import ACTS
 from tests.lockstep_runs import Rehearsal, demo
 from tests.stand import ARM_KEY, HEALTHY, PERIOD_NS, SESSION, Driver, Stand
@@ -401,6 +406,27 @@ def test_a_law_with_an_impossible_number_of_terms_is_not_called(count: int) -> N
     assert (stand.mode, stand.cause, int(row["law_status"])) == (MODE_BRAKING, "law_status", 0)
 
 
+def test_a_driver_that_never_echoes_never_gets_ready() -> None:
+    """It grants by itself and sends sound states, but shows nothing of what it hears: the delay is unknown, so no start."""
+    stand = Stand()
+    stand.driver.hears, stand.driver.holder = False, SESSION
+    for _ in range(100):
+        stand.step(BIT_START)
+    assert (stand.mode, stand.conditions()) == (MODE_OFF, {"loop_delay"})
+
+
+def test_a_history_beyond_the_limit_comes_back_inside_at_once() -> None:
+    """The magnitude is the last word: the rate limit never keeps a torque outside, whatever left the gate before."""
+    stand = Stand().to_live()
+    stand.pointers["law_parameters"]["Kd"][0] = 40.0
+    for _ in range(20):
+        stand.step()
+        stand.setup["limits"]["demand_dwell_ns"] = 10**12
+    stand.setup["limits"]["tau_max"][0] = 12.0  # as if a larger torque had left before
+    row = stand.step()
+    assert (stand.mode, float(row["tau_out"][0])) == (MODE_LIVE, 12.0)
+
+
 def test_an_open_stop_chain_is_named_although_it_also_takes_the_enable_away() -> None:
     """Drives lose their enable when the chain opens: the cause is the chain, which tells the person where to look."""
     stand = Stand().to_live()
@@ -550,3 +576,79 @@ def test_the_simulated_arm_in_lock_step_holds_every_rule_under_attack(seed: int)
             assert not broken, f"seed {seed}, cycle {int(row['cycle'])}: {broken}"
         k += cycles
     assert all(judge.count[mode] > 0 for mode in (MODE_OFF, MODE_READY, MODE_LIVE, MODE_BRAKING, MODE_LATCHED)), judge.count
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("seed", [21, 22])
+def test_the_simulated_driver_applies_only_the_holders_own_fresh_torque_in_a_storm_of_messages(seed: int) -> None:
+    """Two controllers, replays and wild numbers, 6000 messages: what is applied keeps every rule of the message contract."""
+    rng = random.Random(seed)
+    print("seed", seed)
+    rehearsal = Rehearsal(demo(), torque_delay=0)  # every message is judged when it arrives
+    setup, memory, n = rehearsal.plant_setup, rehearsal.plant_memory, rehearsal.run.arm.n
+    torque, now_ns, sent, last, granted = new_block(TORQUE), 10**12, [], {}, set()
+    for _ in range(6000):
+        now_ns += rng.choice((0, 0, 300_000, 1_000_000, 5_000_000))
+        assert plant_advance(setup, memory, now_ns) == OK
+        before = memory.copy()
+        torque = wild_torque(rng, setup, memory, n, sent)
+        status = plant_receive(setup, memory, torque, now_ns)
+        session, grant = int(torque["session"]), int(torque["grant"])
+        if int(memory["accepted"]) != int(before["accepted"]):
+            assert status == OK and int(torque["request"]) == REQUEST_DRIVE
+            assert session == int(before["holder"]) == int(memory["holder"]), "only the holder drives"
+            assert grant == int(before["grant"]), "only with the current number"
+            assert int(torque["driver_session"]) == int(setup["session"]) and int(torque["arm_key"]) == int(setup["arm_key"])
+            assert int(torque["sequence"]) > last.get((session, grant), 0), "never an old or repeated message"
+            answered = int(memory["sample_ns"][int(torque["state_sequence"]) % HISTORY])
+            assert now_ns - answered < min(int(torque["valid_for_ns"]), int(setup["valid_for_max_ns"])), "never an old torque"
+            last[(session, grant)] = int(torque["sequence"])
+        else:
+            assert memory["tau_command"].tolist() == before["tau_command"].tolist(), "what is not accepted changes no torque"
+        assert np.all(np.abs(memory["tau_command"][:n]) <= setup["tau_max"][:n]), "finite and within the driver's own limits"
+        if int(memory["holder"]) not in (0, int(before["holder"])):
+            free = int(before["holder"]) == 0 or int(memory["lapses"]) != int(before["lapses"])
+            assert free and int(torque["request"]) == REQUEST_ASK, "a grant is given on request, to one at a time"
+            assert int(memory["phase"]) == PHASE_STILL and not memory["qd"][:n].any(), "a grant is given at rest only"
+            assert int(memory["grant"]) not in granted, "every grant has a new number"
+            granted.add(int(memory["grant"]))
+    assert len(granted) > 20 and int(memory["accepted"]) > 200, (len(granted), int(memory["accepted"]))
+
+
+def wild_torque(rng: random.Random, setup: np.void, memory: np.void, n: int, sent: list[np.void]) -> np.void:
+    """A message of one of two controllers: sound, a little wrong, or a replay of an old one."""
+    if sent and rng.random() < 0.15:
+        return rng.choice(sent)
+    torque = new_block(TORQUE)
+    held = int(memory["holder"])
+    session = held if held and rng.random() < 0.8 else rng.choice((7, 8))
+    newest = int(memory["sequence"])
+    torque["version"], torque["arm_key"], torque["n"] = 1, setup["arm_key"], n
+    torque["session"], torque["driver_session"] = session, setup["session"]
+    torque["sequence"] = 1 + max((int(old["sequence"]) for old in sent if int(old["session"]) == session), default=0)
+    torque["state_sequence"], torque["grant"], torque["valid_for_ns"] = newest, memory["grant"], 20_000_000
+    torque["request"] = rng.choice((REQUEST_DRIVE,) * 12 + (REQUEST_RELEASE,)) if held else REQUEST_ASK
+    torque["tau"][:n] = [rng.uniform(-0.2, 0.2) * float(bound) for bound in setup["tau_max"][:n]]
+    if rng.random() < 0.25:
+        field, value = rng.choice(
+            (
+                ("session", rng.choice((0, 7, 8))),
+                ("sequence", rng.choice((0, 1, int(torque["sequence"]) - 1))),
+                ("driver_session", int(setup["session"]) + 1),
+                ("arm_key", 5),
+                ("n", rng.choice((0, n - 1, 16))),
+                ("grant", int(memory["grant"]) + rng.choice((-1, 1))),
+                ("state_sequence", rng.choice((0, newest + 1, max(newest - 30, 0), max(newest - HISTORY, 0), 2**53 - 1))),
+                ("valid_for_ns", rng.choice((0, 1, 2**53 - 1))),
+                ("request", rng.choice((REQUEST_ASK, REQUEST_DRIVE, REQUEST_RELEASE, 3))),
+                ("tau", rng.choice((math.nan, math.inf, 1e308, -1e6))),
+            )
+        )
+        if field == "tau":
+            torque["tau"][rng.randrange(n)] = value
+        else:
+            torque[field] = value
+    sent.append(torque)
+    if len(sent) > 200:
+        del sent[:100]
+    return torque

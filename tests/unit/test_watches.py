@@ -6,8 +6,12 @@ import numpy as np
 import pytest
 
 from rtctl.blocks import (
+    BIT_STOP,
+    MODE_BRAKING,
+    MODE_HOLDING,
     MODE_LATCHED,
     MODE_LIVE,
+    MODE_OFF,
     WATCH_COUNT,
     WATCH_NAMES,
     WATCH_POSITION,
@@ -114,3 +118,40 @@ def test_a_drive_that_adds_gravity_by_itself_is_refused_unless_allowed() -> None
     for _ in range(60):
         stand.step()
     assert stand.conditions() == set()
+
+
+@pytest.mark.parametrize(
+    ("joint", "field", "value"), [(0, "q_min", 0.31), (1, "q_min", -0.19), (0, "q_max", 0.29), (1, "q_max", -0.21)]
+)
+def test_each_joint_has_both_position_limits(joint: int, field: str, value: float) -> None:
+    """A limit moved past the joint's position trips, on either side and for every joint."""
+    stand = Stand().to_live()
+    stand.setup["limits"][field][joint] = value
+    stand.step()
+    assert (stand.mode, stand.cause) == (MODE_BRAKING, "position")
+
+
+@pytest.mark.parametrize("speed", [0.03, -0.03])
+def test_a_moving_arm_does_not_get_ready(speed: float) -> None:
+    """All checks hold but one joint is faster than its still speed of 0.02 rad/s."""
+    stand = Stand()
+    stand.driver.qd = [0.0, speed]
+    for _ in range(100):
+        stand.step()
+    assert (stand.mode, stand.conditions()) == (MODE_OFF, set())
+
+
+def test_a_stop_ends_only_after_a_dwell_at_rest_seen_in_new_states() -> None:
+    """Ten periods of 1 ms at rest; a zero crossing begins them again, and cycles without a state do not count."""
+    stand = Stand().to_live()
+    stand.step(BIT_STOP)
+    for k in range(9):
+        stand.driver.qd = [0.0, 0.1 if k == 4 else 0.0]
+        stand.step()
+    cycles = 0
+    while stand.mode == MODE_BRAKING:
+        cycles += 1
+        stand.silent = cycles % 2 == 1
+        stand.step()
+    # Four states at rest after the crossing, so that seven more make it longer than ten periods; every other cycle has none.
+    assert (stand.mode, cycles) == (MODE_HOLDING, 2 * 7)
