@@ -85,7 +85,7 @@ def run_plant(setup, memory, loop):  # type: ignore[no-untyped-def]
     period_ns = setup["period_ns"]
     loop["leave_since_ns"] = 0
     loop["torque_fd"] = socket_option(loop["torque_socket"], ZMQ_FD, scratch)
-    # The driver's clock counts from its start: the computer's would leave the range of the messages after 104 days without a reboot.
+    # The driver's clock counts from its start: the computer's leaves the range of the messages after 104 days.
     loop["epoch_ns"] = now_ns(CLOCK_MONOTONIC, scratch) - EPOCH_LEAD_NS
     begin_ns = _clock_ns(loop)
     deadline_ns = begin_ns
