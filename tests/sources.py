@@ -35,6 +35,11 @@ SOURCES: dict[str, str] = {
     "siciliano2009": "B. Siciliano, L. Sciavicco, L. Villani, G. Oriolo, Robotics, Springer, 2009 (from memory).",
     "astrom-hagglund1995": "K. J. Astrom, T. Hagglund, PID Controllers: Theory, Design, and Tuning, 1995, sec. 3.5 (from memory).",
     "franklin1998": "G. F. Franklin, J. D. Powell, M. Workman, Digital Control of Dynamic Systems, 3rd ed. 1998 (from memory).",
+    "graham-lathrop1953": "D. Graham, R. C. Lathrop, The Synthesis of Optimum Transient Response, Trans. AIEE 72, 1953, 273-288.",
+    "mayeda1990": "H. Mayeda, K. Yoshida, K. Osuka, IEEE Trans. Robotics and Automation 6(3), 1990, 312-321 (from memory).",
+    "gautier-khalil1990": "M. Gautier, W. Khalil, IEEE Trans. Robotics and Automation 6(3), 1990, 368-373 (from memory).",
+    "khatib1987": "O. Khatib, IEEE J. Robotics and Automation 3(1), 1987, 43-53 (from memory).",
+    "wgs84": "WGS 84 normal gravity, Somigliana's formula, NIMA TR8350.2: equator 9.7803253359, pole 9.8321849378.",
     "scipy": "SciPy >= 1.15, general-purpose numerical library.",
 }
 

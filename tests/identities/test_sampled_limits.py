@@ -86,19 +86,23 @@ def test_damping_has_a_lower_and_an_upper_limit(Kp: float, Kd: float, unstable: 
     assert (grows(errors) == unstable).all()
 
 
-@source("franklin1998", "delay margin = phase margin / crossover; 0.6474092 / w of PD, 0.4070542 / L of PID, derived in the test")
-@pytest.mark.parametrize(("form", "margin"), [(critically_damped, 0.6474092), (triple_pole, 0.4070542)])
-def test_delay_margin(form: Callable[[float], Gains], margin: float) -> None:
+@source("franklin1998", "delay margin = phase margin / crossover of the open loop, computed in the test from its polynomials")
+@pytest.mark.parametrize(
+    ("form", "crossover", "phase_deg", "margin"),
+    [(critically_damped, 2.0581710, 76.3454, 0.6474092), (triple_pole, 3.0549834, 71.2498, 0.4070542)],
+)
+def test_delay_margin(form: Callable[[float], Gains], crossover: float, phase_deg: float, margin: float) -> None:
     """At a hundredth of the sampling limit the latency that a loop bears is its continuous delay margin, less half a period.
 
-    Crossover of the open loop and its phase by hand for PD: w_c^2 = w^2 (2 + sqrt 5), phase margin atan(2 w_c / w).
+    PD: w_c^2 = w^2 (2 + sqrt 5), margin 0.6474092 / w; with an integral and a triple pole -L: 0.4070542 / L.
     """
+    Kp, Kd, Ki = form(1.0)
+    open_loop = (Kd * (1j * crossover) ** 2 + Kp * 1j * crossover + Ki) / (1j * crossover) ** 3
+    assert abs(open_loop) == pytest.approx(1.0, abs=1e-7)
+    assert 180.0 + np.degrees(np.angle(open_loop)) == pytest.approx(phase_deg, abs=5e-5)
+    assert math.radians(phase_deg) / crossover == pytest.approx(margin, abs=5e-7)
     if form is critically_damped:
-        crossover = math.sqrt(2.0 + math.sqrt(5.0))
-        assert crossover == pytest.approx(2.0581710, abs=PRINTED)
-        phase = math.atan(2.0 * crossover)
-        assert math.degrees(phase) == pytest.approx(76.3454, abs=5e-5)
-        assert phase / crossover == pytest.approx(margin, abs=PRINTED)
+        assert math.sqrt(2.0 + math.sqrt(5.0)) == pytest.approx(crossover, abs=PRINTED)
     a = 0.01
     bearable = margin / a - 0.5  # holding the torque counts as half a period
     for share, unstable in ((0.98, False), (1.02, True)):

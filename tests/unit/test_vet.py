@@ -43,8 +43,8 @@ def test_nothing_found() -> None:
 
 @pytest.mark.parametrize("path", sorted((TOP / "configs/arms").glob("*.toml")), ids=lambda path: path.stem)
 def test_shipped_arms_pass(path: Path) -> None:
-    """Every shipped arm passes; a poor model may well be a possible arm."""
-    assert vet_arm(path).verdict == "pass"
+    """Every shipped arm passes, a poor model too: it may well be a possible arm. The toy of the driver templates has no drive."""
+    assert vet_arm(path).verdict == ("warn" if path.stem == "toy" else "pass")
 
 
 @source("textbook mechanics", "balance of moments of two level links")
