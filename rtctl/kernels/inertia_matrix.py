@@ -24,6 +24,12 @@ def inertia_matrix(model: np.void, q: Array, ws: np.void, M: Array) -> int:
     and inertia about the body origin instead of 6 x 6 matrices.
     """
     joint_transforms(model, q, ws)
+    return inertia_matrix_at_pose(model, ws, M)
+
+
+@hot(inline=True)
+def inertia_matrix_at_pose(model: np.void, ws: np.void, M: Array) -> int:
+    """`inertia_matrix` at the pose for which `joint_transforms` was called last; leaves R and p of the scratch as they are."""
     R, P, mass, h, II = ws["R"], ws["p"], ws["mass_c"], ws["h_c"], ws["I_c"]
     parent, kind = model["parent"], model["kind"]
     n = model["n"]
@@ -64,24 +70,28 @@ def inertia_matrix(model: np.void, q: Array, ws: np.void, M: Array) -> int:
         k = parent[i]
         if k < 0:
             continue
-        # The composite body joins its parent's: rotate the inertia, then shift it with the parallel-axis rule.
+        # The composite body joins its parent's: rotate the inertia, then shift it with the parallel-axis rule. A multiple of the
+        # identity turns into itself, so zz is taken out before and put back after; the trace gives the last element.
         r00, r01, r02 = R[i, 0, 0], R[i, 0, 1], R[i, 0, 2]
         r10, r11, r12 = R[i, 1, 0], R[i, 1, 1], R[i, 1, 2]
         r20, r21, r22 = R[i, 2, 0], R[i, 2, 1], R[i, 2, 2]
         px, py, pz = P[i, 0], P[i, 1], P[i, 2]
-        a00, a01, a02 = r00 * xx + r01 * xy + r02 * xz, r00 * xy + r01 * yy + r02 * yz, r00 * xz + r01 * yz + r02 * zz
-        a10, a11, a12 = r10 * xx + r11 * xy + r12 * xz, r10 * xy + r11 * yy + r12 * yz, r10 * xz + r11 * yz + r12 * zz
-        a20, a21, a22 = r20 * xx + r21 * xy + r22 * xz, r20 * xy + r21 * yy + r22 * yz, r20 * xz + r21 * yz + r22 * zz
+        dx, dy = xx - zz, yy - zz
+        a00, a01, a02 = r00 * dx + r01 * xy + r02 * xz, r00 * xy + r01 * dy + r02 * yz, r00 * xz + r01 * yz
+        a10, a11, a12 = r10 * dx + r11 * xy + r12 * xz, r10 * xy + r11 * dy + r12 * yz, r10 * xz + r11 * yz
+        b00 = a00 * r00 + a01 * r01 + a02 * r02
+        b11 = a10 * r10 + a11 * r11 + a12 * r12
         gx, gy, gz = r00 * hx + r01 * hy + r02 * hz, r10 * hx + r11 * hy + r12 * hz, r20 * hx + r21 * hy + r22 * hz
-        sx, sy, sz = px * (2.0 * gx + m * px), py * (2.0 * gy + m * py), pz * (2.0 * gz + m * pz)
-        II[k, 0] += a00 * r00 + a01 * r01 + a02 * r02 + sy + sz
-        II[k, 1] += a00 * r10 + a01 * r11 + a02 * r12 - gx * py - (gy + m * py) * px
-        II[k, 2] += a00 * r20 + a01 * r21 + a02 * r22 - gx * pz - (gz + m * pz) * px
-        II[k, 3] += a10 * r10 + a11 * r11 + a12 * r12 + sx + sz
-        II[k, 4] += a10 * r20 + a11 * r21 + a12 * r22 - gy * pz - (gz + m * pz) * py
-        II[k, 5] += a20 * r20 + a21 * r21 + a22 * r22 + sx + sy
+        kx, ky, kz = gx + m * px, gy + m * py, gz + m * pz
+        sx, sy, sz = px * (gx + kx), py * (gy + ky), pz * (gz + kz)
+        II[k, 0] += b00 + zz + sy + sz
+        II[k, 1] += a00 * r10 + a01 * r11 + a02 * r12 - gx * py - ky * px
+        II[k, 2] += a00 * r20 + a01 * r21 + a02 * r22 - gx * pz - kz * px
+        II[k, 3] += b11 + zz + sx + sz
+        II[k, 4] += a10 * r20 + a11 * r21 + a12 * r22 - gy * pz - kz * py
+        II[k, 5] += dx + dy - b00 - b11 + zz + sx + sy
         mass[k] += m
-        h[k, 0] += gx + m * px
-        h[k, 1] += gy + m * py
-        h[k, 2] += gz + m * pz
+        h[k, 0] += kx
+        h[k, 1] += ky
+        h[k, 2] += kz
     return OK

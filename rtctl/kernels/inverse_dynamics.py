@@ -1,6 +1,8 @@
 """Joint torques of a motion: inverse dynamics, and its two parts of every cycle, bias torque and gravity torque.
 
 Scalars are written out: numba keeps them in registers, small arrays it does not. Friction is not in here: `rtctl.kernels.friction`.
+The functions `.._at_pose` leave out what all kernels begin with, the sines and cosines of `joint_transforms`: for callers that need
+several kernels at one pose.
 """
 
 import numpy as np
@@ -29,6 +31,12 @@ def inverse_dynamics(model: np.void, q: Array, qd: Array, qdd: Array, ws: np.voi
     Rotor inertia acts on the joint's own acceleration only: gyroscopic torque of the spinning rotors is neglected, as usual.
     """
     joint_transforms(model, q, ws)
+    return inverse_dynamics_at_pose(model, qd, qdd, ws, tau)
+
+
+@hot(inline=True)
+def inverse_dynamics_at_pose(model: np.void, qd: Array, qdd: Array, ws: np.void, tau: Array) -> int:
+    """`inverse_dynamics` at the pose for which `joint_transforms` was called last; leaves R and p of the scratch as they are."""
     R, P, W, WD, A, F, N = ws["R"], ws["p"], ws["w"], ws["wd"], ws["a"], ws["force"], ws["moment"]
     parent, kind, H, II = model["parent"], model["kind"], model["h"], model["I"]
     n = model["n"]
@@ -105,6 +113,12 @@ def bias_torque(model: np.void, q: Array, qd: Array, ws: np.void, tau: Array) ->
     return inverse_dynamics(model, q, qd, ws["zero"][:], ws, tau)
 
 
+@hot(inline=True)
+def bias_torque_at_pose(model: np.void, qd: Array, ws: np.void, tau: Array) -> int:
+    """`bias_torque` at the pose for which `joint_transforms` was called last; leaves R and p of the scratch as they are."""
+    return inverse_dynamics_at_pose(model, qd, ws["zero"][:], ws, tau)
+
+
 @hot
 def gravity_torque(model: np.void, q: Array, ws: np.void, tau: Array) -> int:
     """Torques that hold the arm at rest against gravity, g(q).
@@ -117,6 +131,12 @@ def gravity_torque(model: np.void, q: Array, ws: np.void, tau: Array) -> int:
     Own derivation: everything outboard of a joint, at rest, weighs on it like one rigid body: only its mass and first moment count.
     """
     joint_transforms(model, q, ws)
+    return gravity_torque_at_pose(model, ws, tau)
+
+
+@hot(inline=True)
+def gravity_torque_at_pose(model: np.void, ws: np.void, tau: Array) -> int:
+    """`gravity_torque` at the pose for which `joint_transforms` was called last; leaves R and p of the scratch as they are."""
     R, P, A, h, mass = ws["R"], ws["p"], ws["a"], ws["h_c"], ws["mass_c"]
     parent, kind = model["parent"], model["kind"]
     n = model["n"]

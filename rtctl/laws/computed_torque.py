@@ -17,8 +17,9 @@ import numpy as np
 from rtctl.kernels.cholesky import cholesky
 from rtctl.kernels.compile import hot
 from rtctl.kernels.friction import friction_torque
-from rtctl.kernels.inertia_matrix import inertia_matrix
-from rtctl.kernels.inverse_dynamics import bias_torque, gravity_torque
+from rtctl.kernels.inertia_matrix import inertia_matrix_at_pose
+from rtctl.kernels.inverse_dynamics import bias_torque_at_pose, gravity_torque_at_pose
+from rtctl.kernels.kinematics import joint_transforms
 from rtctl.kernels.layout import OK
 from rtctl.laws.gains import acceleration_gains
 from rtctl.laws.integral import integral_step
@@ -43,14 +44,16 @@ def torque(model, x, parameters, memory, ws, terms):
     Returns OK, or the status of the kernel that failed; an inertia matrix that is not positive definite is a failure.
     """
     n = model["n"]
-    q, bias, M = x["q"][:], ws["x0"][:], ws["M"][:]
-    status = gravity_torque(model, q, ws, terms[0])
+    bias, M = ws["x0"][:], ws["M"][:]
+    status = joint_transforms(model, x["q"][:], ws)
     if status == OK:
-        status = bias_torque(model, q, x["qd"][:], ws, bias)
+        status = gravity_torque_at_pose(model, ws, terms[0])
+    if status == OK:
+        status = bias_torque_at_pose(model, x["qd"][:], ws, bias)
     if status == OK:
         status = friction_torque(model, x["qd_ref"][:], terms[6])
     if status == OK:
-        status = inertia_matrix(model, q, ws, M)
+        status = inertia_matrix_at_pose(model, ws, M)
     if status == OK:
         status = cholesky(M, n, ws["L"][:])
     if status != OK:

@@ -12,7 +12,8 @@ import numpy as np
 
 from rtctl.kernels.compile import hot
 from rtctl.kernels.friction import friction_torque
-from rtctl.kernels.inverse_dynamics import bias_torque, gravity_torque, inverse_dynamics
+from rtctl.kernels.inverse_dynamics import bias_torque_at_pose, gravity_torque_at_pose, inverse_dynamics_at_pose
+from rtctl.kernels.kinematics import joint_transforms
 from rtctl.kernels.layout import OK
 from rtctl.laws.gains import no_gains
 
@@ -37,11 +38,13 @@ def reference_terms(model, x, ws, gravity, velocity, inertia, friction):
     """
     n = model["n"]
     bias, whole = ws["x0"][:], ws["x1"][:]
-    status = gravity_torque(model, x["q_ref"][:], ws, gravity)
+    status = joint_transforms(model, x["q_ref"][:], ws)
     if status == OK:
-        status = bias_torque(model, x["q_ref"][:], x["qd_ref"][:], ws, bias)
+        status = gravity_torque_at_pose(model, ws, gravity)
     if status == OK:
-        status = inverse_dynamics(model, x["q_ref"][:], x["qd_ref"][:], x["qdd_ref"][:], ws, whole)
+        status = bias_torque_at_pose(model, x["qd_ref"][:], ws, bias)
+    if status == OK:
+        status = inverse_dynamics_at_pose(model, x["qd_ref"][:], x["qdd_ref"][:], ws, whole)
     if status == OK:
         status = friction_torque(model, x["qd_ref"][:], friction)
     if status != OK:

@@ -29,8 +29,9 @@ import math
 from rtctl.kernels.cholesky import cholesky, cholesky_solve
 from rtctl.kernels.compile import hot
 from rtctl.kernels.energy import kinetic_energy, potential_energy
-from rtctl.kernels.inertia_matrix import inertia_matrix
-from rtctl.kernels.inverse_dynamics import bias_torque
+from rtctl.kernels.inertia_matrix import inertia_matrix_at_pose
+from rtctl.kernels.inverse_dynamics import bias_torque_at_pose
+from rtctl.kernels.kinematics import joint_transforms
 from rtctl.kernels.layout import OK
 from rtctl.plant.blocks import BRAKE_CLOSED, BRAKE_OPENING
 
@@ -57,7 +58,9 @@ def substep(setup, memory, dt):
     _drive_torque(setup, memory, dt)
     for i in range(n):
         q_mid[i] = memory["q"][i] + 0.5 * dt * memory["qd"][i]
-    status = inertia_matrix(model, q_mid, memory["scratch"], M)
+    status = joint_transforms(model, q_mid, memory["scratch"])
+    if status == OK:
+        status = inertia_matrix_at_pose(model, memory["scratch"], M)
     if status != OK:
         return status
     for i in range(n):
@@ -70,7 +73,7 @@ def substep(setup, memory, dt):
 
     # Predict with the velocity before, then correct with the mean of before and after.
     for _ in range(1 + CORRECTIONS):
-        status = bias_torque(model, q_mid, qd_mid, memory["scratch"], memory["bias"][:])
+        status = bias_torque_at_pose(model, qd_mid, memory["scratch"], memory["bias"][:])
         if status != OK:
             return status
         for i in range(n):

@@ -171,6 +171,8 @@ def limit_of(arm: Subject, kernel: str, times: dict[str, Times], count: dict[str
     """How close a kernel is to its arithmetic."""
     limit = count["arithmetic"] * times["chains"] + times["sines"]
     sines, chains = float(np.median(times["sines"])), float(np.median(times["chains"]))
-    note = f"{count['arithmetic']} operations at {1.0 / chains:.1f} per ns, {count['sines_cosines']} sines, cosines in {sines:.0f} ns"
+    note = (
+        f"{count['arithmetic']} operations at {1.0 / chains:.1f} per ns, {count['sines_cosines']} sines, cosines: {sines:.0f} ns"
+    )
     key = f"{kernel}_{arm.n}_limit_ratio"
     return cost(key, f"{WORDS[kernel]}, {arm.n} joints", times["ours"], limit, note=note)

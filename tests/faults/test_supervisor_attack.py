@@ -51,7 +51,7 @@ from tests.stand import ARM_KEY, HEALTHY, PERIOD_NS, SESSION, Driver, Stand
 from tests.supervisor_judge import LEGAL, Judge, stop_of
 
 SEEDS = (20270101, 20270102, 20270103)
-EPISODES = 40  # per seed
+EPISODES = 36  # per seed
 CYCLES = 200  # attacked, of one episode
 HEALED_CYCLES = 2600  # late cycles need a window of 1000 to be forgotten, twice when their count is full
 POISON = (math.nan, math.inf, -math.inf, 1e308, -1e308, 5e-324, 4.0, -4.0, 1e6)
@@ -581,17 +581,17 @@ def test_the_simulated_arm_in_lock_step_holds_every_rule_under_attack(seed: int)
 @pytest.mark.slow
 @pytest.mark.parametrize("seed", [21, 22])
 def test_the_simulated_driver_applies_only_the_holders_own_fresh_torque_in_a_storm_of_messages(seed: int) -> None:
-    """Two controllers, replays and wild numbers, 6000 messages: what is applied keeps every rule of the message contract."""
+    """Two controllers, replays and wild numbers, 4000 messages: what is applied keeps every rule of the message contract."""
     rng = random.Random(seed)
     print("seed", seed)
     rehearsal = Rehearsal(demo(), torque_delay=0)  # every message is judged when it arrives
     setup, memory, n = rehearsal.plant_setup, rehearsal.plant_memory, rehearsal.run.arm.n
-    torque, now_ns, sent, last, granted = new_block(TORQUE), 10**12, [], {}, set()
-    for _ in range(6000):
+    now_ns, sent, numbers, last, granted = 10**12, [], Counter(), {}, set()
+    for _ in range(4000):
         now_ns += rng.choice((0, 0, 300_000, 1_000_000, 5_000_000))
         assert plant_advance(setup, memory, now_ns) == OK
         before = memory.copy()
-        torque = wild_torque(rng, setup, memory, n, sent)
+        torque = wild_torque(rng, setup, memory, n, sent, numbers)
         status = plant_receive(setup, memory, torque, now_ns)
         session, grant = int(torque["session"]), int(torque["grant"])
         if int(memory["accepted"]) != int(before["accepted"]):
@@ -615,7 +615,9 @@ def test_the_simulated_driver_applies_only_the_holders_own_fresh_torque_in_a_sto
     assert len(granted) > 20 and int(memory["accepted"]) > 200, (len(granted), int(memory["accepted"]))
 
 
-def wild_torque(rng: random.Random, setup: np.void, memory: np.void, n: int, sent: list[np.void]) -> np.void:
+def wild_torque(
+    rng: random.Random, setup: np.void, memory: np.void, n: int, sent: list[np.void], numbers: Counter[int]
+) -> np.void:
     """A message of one of two controllers: sound, a little wrong, or a replay of an old one."""
     if sent and rng.random() < 0.15:
         return rng.choice(sent)
@@ -625,7 +627,8 @@ def wild_torque(rng: random.Random, setup: np.void, memory: np.void, n: int, sen
     newest = int(memory["sequence"])
     torque["version"], torque["arm_key"], torque["n"] = 1, setup["arm_key"], n
     torque["session"], torque["driver_session"] = session, setup["session"]
-    torque["sequence"] = 1 + max((int(old["sequence"]) for old in sent if int(old["session"]) == session), default=0)
+    numbers[session] += 1
+    torque["sequence"] = numbers[session]
     torque["state_sequence"], torque["grant"], torque["valid_for_ns"] = newest, memory["grant"], 20_000_000
     torque["request"] = rng.choice((REQUEST_DRIVE,) * 12 + (REQUEST_RELEASE,)) if held else REQUEST_ASK
     torque["tau"][:n] = [rng.uniform(-0.2, 0.2) * float(bound) for bound in setup["tau_max"][:n]]
